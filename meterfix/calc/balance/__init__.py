@@ -1,0 +1,1 @@
+"""Envelopes and their imbalance."""

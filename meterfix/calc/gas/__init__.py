@@ -1,0 +1,1 @@
+"""Equations of state, property tiles, calorific value, transport properties."""

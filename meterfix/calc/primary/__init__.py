@@ -1,0 +1,1 @@
+"""Primary devices, one file per family, and the one flow solver."""

@@ -1,0 +1,1 @@
+"""The example site and its seeded simulator, with physics of its own."""

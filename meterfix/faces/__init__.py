@@ -1,0 +1,1 @@
+"""The command line and its tables: shows stored figures, never recomputes them."""

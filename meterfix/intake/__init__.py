@@ -1,0 +1,1 @@
+"""Data in: the site file to a model; log bytes to readings and problems."""

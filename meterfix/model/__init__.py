@@ -1,0 +1,1 @@
+"""What a site is: frozen, effective-dated, SI."""

@@ -1,0 +1,1 @@
+"""Orchestration: passes, closing, replay; the only reader of the clock."""
