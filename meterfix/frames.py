@@ -12,6 +12,9 @@ from meterfix.model.gas import BaseConditions, GasTerms
 from meterfix.model.site import EnergyTerms, MeterTerms
 from meterfix.model.source import Excluded, Transmitter
 
+CALCULATION_VERSION = "1"
+"""Changes only together with a `Figures changed` entry in the changelog."""
+
 Floats = NDArray[np.float64]
 Instants = NDArray[np.int64]
 """UTC microseconds since 1970."""
@@ -73,6 +76,8 @@ class ParsedFile:
     problems: tuple[Problem, ...]
     end_instant_is_later: bool = False
     """State of the repeated-hour rule at the file's end, for a tail that follows."""
+    end_local: int | None = None
+    """Last local time [us, as if the clock showed UTC] in a repeated hour; the same rule's."""
 
 
 # --- run -> calc -----------------------------------------------------------------------------

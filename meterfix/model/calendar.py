@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from datetime import UTC, date, datetime, timedelta
+from datetime import UTC, date, datetime, time, timedelta
 from functools import cached_property
 from zoneinfo import ZoneInfo
 
@@ -53,9 +53,7 @@ class GasDayCalendar:
         """Return the gas day's first instant [UTC us]."""
         chosen: int | None = None
         for version in self.gas_day_start.entries:
-            local = datetime(gas_day.year, gas_day.month, gas_day.day) + timedelta(
-                seconds=version.value
-            )
+            local = datetime.combine(gas_day, time()) + timedelta(seconds=version.value)
             instant = to_microseconds(local.replace(tzinfo=self._zone))
             if version.since is None or version.since <= instant or chosen is None:
                 chosen = instant

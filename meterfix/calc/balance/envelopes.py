@@ -1,0 +1,276 @@
+"""The balance of an envelope over the hours of a gas day and over the gas day.
+
+imbalance = in - out - vented - change of storage. No storage is configured yet, so gas kept in
+pipes and vessels from one hour to the next is not known: the change of storage is None, hours
+have no verdict, and a gas day is judged as if the storage were the same at both its ends.
+Nothing is judged on missing input: one meter that is not measured throughout takes the imbalance
+of the hour or gas day with it, and the reason names it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from datetime import date
+from enum import StrEnum
+from math import floor, fsum, isnan
+
+import numpy as np
+
+from meterfix.calc.totals.periods import PeriodTotal, day_total
+from meterfix.frames import HOURLY_INDEX, Floats, HourlyRecord
+from meterfix.model.site import Envelope, Tolerance
+
+BALANCE_COLUMNS: tuple[str, ...] = ("in", "out", "vented", "imbalance", "measured_fraction")
+"""Columns of the hourly array; SI, NaN: not known."""
+
+QUANTITIES: tuple[str, ...] = ("mass", "base_volume", "energy")
+"""kg, m3, J."""
+
+NO_STORAGE = "storage is not configured"
+NO_UNCERTAINTY = "no uncertainty yet"
+
+
+class Answer(StrEnum):
+    """What a verdict says."""
+
+    YES = "yes"
+    NO = "no"
+    CANNOT_BE_JUDGED = "cannot be judged"
+
+
+@dataclass(frozen=True, slots=True)
+class Verdict:
+    """An answer, and why there is none."""
+
+    answer: Answer
+    reason: str = ""
+    """'' for yes and no."""
+
+    def __str__(self) -> str:
+        return f"{self.answer}: {self.reason}" if self.reason else str(self.answer)
+
+
+@dataclass(frozen=True, slots=True)
+class DayBalance:
+    """The balance of one envelope and quantity over one gas day."""
+
+    envelope: str
+    quantity: str
+    gas_day: date | None
+    """None where no meter has a record."""
+    start: int | None
+    """UTC us."""
+    hourly: Floats
+    """(hours, len(BALANCE_COLUMNS))."""
+    hourly_reasons: tuple[str, ...]
+    """Per hour, what its input lacks; '' where it is complete."""
+    hourly_verdict: Verdict
+    """Of every hour, for both questions."""
+    inflow: float | None
+    """kg, m3 or J over measured time; None if a meter has none at all. So are the next two."""
+    outflow: float | None
+    vented: float | None
+    storage_change: float | None
+    storage_reason: str
+    imbalance: float | None
+    """None unless every input is complete."""
+    tolerance: float | None
+    """In the quantity's unit; None if there is none or its base is not known."""
+    significant: Verdict
+    beyond_tolerance: Verdict
+    measured_fraction: float
+    """The smallest of the meters'; 0 where one has no record."""
+    reason: str
+    """What the input lacks; '' where it is complete."""
+
+
+@dataclass(frozen=True, slots=True)
+class _Input:
+    """What one meter brings to the day: its record if there is one, and the day's total."""
+
+    meter: str
+    record: HourlyRecord | None
+    total: PeriodTotal | None
+
+    def day(self, quantity: str) -> float | None:
+        value: float | None = None if self.total is None else getattr(self.total, quantity)
+        return value
+
+    def hour(self, name: str, hour: int) -> float:
+        if self.record is None:
+            return float("nan")
+        return float(self.record.statistics[hour, HOURLY_INDEX[name]])
+
+
+def _percent(fraction: float) -> str:
+    """Return a fraction in percent, cut and not rounded, so that 100 % means all of it."""
+    return f"{floor(fraction * 10_000) / 100:.2f} %"
+
+
+def _lack(meter: str, *, fraction: float | None, has_value: bool, quantity: str) -> str:
+    """Return what a meter's input lacks, '' if nothing."""
+    if fraction is None:
+        return f"{meter} (no record)"
+    if fraction < 1.0:
+        return f"{meter} ({_percent(fraction)} measured)"
+    if not has_value:
+        return f"{meter} (no {quantity.replace('_', ' ')})"
+    return ""
+
+
+def _reason(lacks: list[str]) -> str:
+    named = [lack for lack in dict.fromkeys(lacks) if lack]
+    return f"missing input: {', '.join(named)}" if named else ""
+
+
+def _sum(values: list[float | None]) -> float | None:
+    """Return the exactly rounded sum, None if a value is not known."""
+    known = [value for value in values if value is not None and not isnan(value)]
+    return fsum(known) + 0.0 if len(known) == len(values) else None
+
+
+def _imbalance(inflow: float | None, outflow: float | None, vented: float | None) -> float | None:
+    """Return in - out - vented, from the very figures that are shown; None if one is missing."""
+    if inflow is None or outflow is None or vented is None:
+        return None
+    return inflow - outflow - vented + 0.0  # -0.0 + 0.0 is 0.0
+
+
+def day_balance(
+    envelope: Envelope,
+    quantity: str,
+    records: Mapping[str, HourlyRecord | None],
+    tolerance: Tolerance | None,
+) -> DayBalance:
+    """Return an envelope's balance over the hours of a gas day and over the gas day.
+
+    Parameters
+    ----------
+    envelope : Envelope
+    quantity : str
+        'mass', 'base_volume' or 'energy'.
+    records : mapping
+        The gas day's hourly record per meter of the envelope; None, or no entry, where there is
+        none.
+    tolerance : Tolerance or None
+        What is in force on the gas day; None: the contract states none.
+
+    Returns
+    -------
+    DayBalance
+        SI.
+
+    Raises
+    ------
+    ValueError
+        If the quantity is not balanced, or the records are not of one gas day.
+    """
+    if quantity not in QUANTITIES:
+        message = f"envelope {envelope.name}: quantity is {quantity!r}; it must be one of " + (
+            ", ".join(QUANTITIES)
+        )
+        raise ValueError(message)
+    groups = [
+        [
+            _Input(meter, record, None if record is None else day_total(record))
+            for meter in meters
+            for record in (records.get(meter),)
+        ]
+        for meters in (envelope.inflow, envelope.outflow, envelope.vented)
+    ]
+    inputs = [entry for group in groups for entry in group]
+    present = [entry.record for entry in inputs if entry.record is not None]
+    spans = {(record.gas_day, record.start, len(record.statistics)) for record in present}
+    if len(spans) > 1:
+        message = f"envelope {envelope.name}: records of different gas days: {sorted(spans)}"
+        raise ValueError(message)
+    gas_day, start, hours = next(iter(spans), (None, None, 0))
+
+    hourly = np.full((hours, len(BALANCE_COLUMNS)), np.nan)
+    reasons = []
+    for hour in range(hours):
+        hourly[hour], reason = _hour(groups, quantity, hour)
+        reasons.append(reason)
+
+    lack = _reason(
+        [
+            _lack(
+                entry.meter,
+                fraction=None if entry.total is None else entry.total.measured_fraction,
+                has_value=not any(isnan(entry.hour(quantity, hour)) for hour in range(hours)),
+                quantity=quantity,
+            )
+            for entry in inputs
+        ]
+    )
+    values = [[entry.day(quantity) for entry in group] for group in groups]
+    inflow, outflow, vented = (_sum(group) for group in values)
+    imbalance = None if lack or not inputs else _imbalance(inflow, outflow, vented)
+    limit = None
+    if tolerance is not None and inflow is not None:
+        limit = tolerance.fraction_of_in * inflow
+    return DayBalance(
+        envelope=envelope.name,
+        quantity=quantity,
+        gas_day=gas_day,
+        start=start,
+        hourly=hourly,
+        hourly_reasons=tuple(reasons),
+        hourly_verdict=Verdict(Answer.CANNOT_BE_JUDGED, NO_STORAGE),
+        inflow=inflow,
+        outflow=outflow,
+        vented=vented,
+        storage_change=None,
+        storage_reason=NO_STORAGE,
+        imbalance=imbalance,
+        tolerance=limit,
+        significant=Verdict(Answer.CANNOT_BE_JUDGED, NO_UNCERTAINTY),
+        beyond_tolerance=_beyond(imbalance, limit, lack),
+        measured_fraction=min(
+            (0.0 if entry.total is None else entry.total.measured_fraction for entry in inputs),
+            default=0.0,
+        ),
+        reason=lack,
+    )
+
+
+def _hour(groups: list[list[_Input]], quantity: str, hour: int) -> tuple[list[float], str]:
+    """Return one hour's row of BALANCE_COLUMNS, and what its input lacks."""
+    lacks: list[str] = []
+    fractions: list[float] = []
+    values: list[list[float | None]] = []
+    for group in groups:
+        values.append([])
+        for entry in group:
+            value = entry.hour(quantity, hour)
+            fraction = None
+            if entry.record is not None:
+                fraction = entry.hour("measured_time", hour) / entry.hour("duration", hour)
+            fractions.append(fraction or 0.0)
+            lacks.append(
+                _lack(
+                    entry.meter,
+                    fraction=fraction,
+                    has_value=not isnan(value),
+                    quantity=quantity,
+                )
+            )
+            values[-1].append(value)
+    reason = _reason(lacks)
+    inflow, outflow, vented = (_sum(group) for group in values)
+    imbalance = None if reason else _imbalance(inflow, outflow, vented)
+    row = (inflow, outflow, vented, imbalance)
+    known = [float("nan") if value is None else value for value in row]
+    return [*known, min(fractions)], reason
+
+
+def _beyond(imbalance: float | None, limit: float | None, lack: str) -> Verdict:
+    """Return whether the imbalance is beyond the contract's tolerance."""
+    if lack:
+        return Verdict(Answer.CANNOT_BE_JUDGED, lack)
+    if imbalance is None:
+        return Verdict(Answer.CANNOT_BE_JUDGED, "the envelope has no meter")
+    if limit is None:
+        return Verdict(Answer.CANNOT_BE_JUDGED, "no tolerance is stated")
+    return Verdict(Answer.YES if abs(imbalance) > limit else Answer.NO)

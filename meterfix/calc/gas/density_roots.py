@@ -1,0 +1,187 @@
+"""Amount density from pressure and temperature by AGA8 DETAIL: the gas root, or the dense one.
+
+What is detected as 'no gas', exactly:
+
+1. Walking up from zero density in steps of at most 0.05 in reduced density, the isotherm stops
+   rising, (dp/dD)_T <= 0 or less pressure after a step, before it reaches the pressure: there
+   is no gas root.
+2. Below the mixture's mechanical critical temperature (the highest at which an isotherm of this
+   composition stops rising anywhere) a gas root exists, and a second, denser stable root too,
+   whose Gibbs energy at the same pressure, temperature and composition is the lower one: the
+   gas root is not unique and only metastable. For a pure component this is its saturation
+   curve by AGA8 DETAIL itself.
+3. No root up to a reduced density of 4, or no convergence.
+
+For a mixture condition 2 lies inside the two-phase region: between the dew point and this
+boundary a wet gas is still given as gas. A dew point is not computed here.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from meterfix.calc.elementary import logarithm
+from meterfix.calc.gas.detail import (
+    GAS_CONSTANT,
+    DetailMixture,
+    TemperatureSums,
+    pressure_terms,
+    residual_helmholtz_energy,
+    temperature_sums,
+)
+from meterfix.frames import Floats, Truths
+
+_STEP = 0.05
+"""Largest step of the walk in reduced density."""
+_HIGHEST = 4.0
+"""Reduced density beyond which no root is sought: denser than any liquid of the components."""
+_ITERATIONS = 200
+_CONVERGED = 1e-11
+"""Relative Newton step after which the (quadratically convergent) result is frozen."""
+
+
+@dataclass(frozen=True, slots=True)
+class DensityRoots:
+    """Amount densities [kmol/m3], NaN where there is no such root; all (n,)."""
+
+    density: Floats
+    found: Truths
+
+
+def _walk(
+    mixture: DetailMixture, sums: TemperatureSums, target: Floats, *, upward: bool
+) -> DensityRoots:
+    """Follow each isotherm from zero (or from the highest) density to the target.
+
+    The target is p/(R T) [kmol/m3]. Each record walks by Newton steps, limited to `_STEP`,
+    until it has the root between two densities; then by Newton steps that fall back to
+    halving. A record that has converged, or has met a falling isotherm first, is frozen.
+    """
+    n = len(target)
+    density = np.full(n, np.nan)
+    largest = _STEP / mixture.size_cubed
+    highest = _HIGHEST / mixture.size_cubed
+    # state of the active records; all of it is compressed together as records freeze
+    active = np.arange(n)
+    D = np.zeros(n) if upward else np.full(n, highest)
+    lower, upper = np.zeros(n), np.full(n, highest)
+    bracketed = np.zeros(n, dtype=np.bool_)
+    before = np.full(n, -np.inf if upward else np.inf)
+    for _ in range(_ITERATIONS):
+        Z, slope = pressure_terms(mixture, sums, D)
+        excess = D * Z - target
+        below = excess < 0.0
+        lower = np.where(below, D, lower)
+        upper = np.where(below, upper, D)
+        bracketed |= ~below if upward else below
+        rising = slope > 0.0
+        # a falling isotherm ends the search only before the target has been passed; where it
+        # fell and rose again within one step, the pressure shows it
+        fell = (excess <= before) if upward else (excess >= before)
+        ended = ~bracketed & (~rising | fell)
+        if not upward:
+            # the highest density is already below the pressure: no root is sought beyond it
+            ended |= below & (highest <= D)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            newton = D - excess / slope
+        limited = np.minimum(newton, D + largest) if upward else np.maximum(newton, D - largest)
+        inside = rising & (newton >= lower) & (newton <= upper)
+        following = np.where(bracketed, np.where(inside, newton, 0.5 * (lower + upper)), limited)
+        converged = ~ended & rising & (np.abs(newton - D) <= _CONVERGED * D)
+        outside = (
+            ~bracketed & ~converged & ((following >= highest) if upward else (following <= 0.0))
+        )
+        density[active[converged]] = newton[converged]
+        going = ~(ended | converged | outside)
+        D, before = following, excess
+        if not going.all():
+            if not going.any():
+                break
+            active, D, target = active[going], D[going], target[going]
+            lower, upper, bracketed = lower[going], upper[going], bracketed[going]
+            before = before[going]
+            sums = sums.part(going)
+    return DensityRoots(density, ~np.isnan(density))
+
+
+def mechanical_critical_temperature(mixture: DetailMixture) -> float:
+    """Return a temperature above which every isotherm of the mixture rises all the way [K].
+
+    Found by scanning reduced densities up to 3 over temperatures in steps of 1 %, from above;
+    the step above the last falling isotherm is returned, so the result is safe, not exact.
+    """
+    reduced = np.arange(0.04, 3.0, 0.04)
+    temperature = 3.0 * mixture.temperature_scale
+    while temperature > 0.4 * mixture.temperature_scale:
+        T = np.full(len(reduced), temperature)
+        sums = temperature_sums(mixture, T, orders=1)
+        _, slope = pressure_terms(mixture, sums, reduced / mixture.size_cubed)
+        if not (slope > 0.0).all():
+            return temperature * 1.01
+        temperature /= 1.01
+    return 0.0
+
+
+def _gibbs_energy(mixture: DetailMixture, sums: TemperatureSums, density: Floats) -> Floats:
+    """Return the residual Gibbs energy over R T at equal pressure, temperature, composition."""
+    Z, _ = pressure_terms(mixture, sums, density)
+    return residual_helmholtz_energy(mixture, sums, density) + Z - logarithm(Z)
+
+
+def gas_density(
+    mixture: DetailMixture, pressure: Floats, temperature: Floats, *, two_roots_below: float
+) -> DensityRoots:
+    """Return the amount density of the gas; not found where there is none (see the module).
+
+    Parameters
+    ----------
+    pressure, temperature : (n,) arrays
+        Pa (absolute) and K; positive, not NaN.
+    two_roots_below
+        The mixture's `mechanical_critical_temperature` [K].
+
+    Returns
+    -------
+    DensityRoots
+        The result of a record depends on its own pressure and temperature only.
+    """
+    target = pressure / (1e3 * GAS_CONSTANT * temperature)
+    sums = temperature_sums(mixture, temperature, orders=1)
+    gas = _walk(mixture, sums, target, upward=True)
+    doubtful = np.flatnonzero(gas.found & (temperature < two_roots_below))
+    if len(doubtful) == 0:
+        return gas
+    part = sums.part(doubtful)
+    dense = _walk(mixture, part, target[doubtful], upward=False)
+    density = gas.density[doubtful]
+    two = dense.found & (dense.density > density * (1.0 + 1e-6))
+    metastable = np.zeros(len(doubtful), dtype=np.bool_)
+    chosen = np.flatnonzero(two)
+    if len(chosen):
+        both = part.part(chosen)
+        gas_energy = _gibbs_energy(mixture, both, density[chosen])
+        dense_energy = _gibbs_energy(mixture, both, dense.density[chosen])
+        metastable[chosen] = dense_energy <= gas_energy
+    found = gas.found.copy()
+    found[doubtful[metastable]] = False
+    return DensityRoots(np.where(found, gas.density, np.nan), found)
+
+
+def dense_density(mixture: DetailMixture, pressure: Floats, temperature: Floats) -> DensityRoots:
+    """Return the densest stable root's amount density; the gas's where it is the only one.
+
+    Parameters
+    ----------
+    pressure, temperature : (n,) arrays
+        Pa (absolute) and K; positive, not NaN.
+    """
+    target = pressure / (1e3 * GAS_CONSTANT * temperature)
+    sums = temperature_sums(mixture, temperature, orders=1)
+    dense = _walk(mixture, sums, target, upward=False)
+    missing = np.flatnonzero(~dense.found)
+    if len(missing):
+        only = _walk(mixture, sums.part(missing), target[missing], upward=True)
+        dense.density[missing] = only.density
+    return DensityRoots(dense.density, ~np.isnan(dense.density))

@@ -1,0 +1,407 @@
+"""Rows of `show`, read from the ledger and named as the contract names them; never computed."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from datetime import date
+from typing import Any
+
+from meterfix.calc.balance.envelopes import BALANCE_COLUMNS
+from meterfix.frames import FLAGS, HOURLY_INDEX, MISSING
+from meterfix.model.calendar import HOUR, from_microseconds
+from meterfix.run.opening import OpenSite
+from meterfix.store.ledger import Ledger
+from meterfix.store.values import decode_array
+
+Row = dict[str, Any]
+
+NO_UNCERTAINTY = "no uncertainty yet"
+UNIT = {"mass": "kg", "base_volume": "m3", "energy": "MJ"}
+EVERY_FLAG = [name for name, _ in FLAGS]
+EVERY_LOSS = [name for name, _ in MISSING]
+
+
+@dataclass(frozen=True)
+class Asked:
+    """What the user wants to see."""
+
+    by: str = "gas-day"
+    meter: str | None = None
+    start: int | None = None
+    """Periods that end after this instant [UTC us]."""
+    end: int | None = None
+    """Periods that begin before this instant [UTC us]."""
+
+    def covers(self, row: Mapping[str, Any]) -> bool:
+        """Return whether a row's period shares time with what is asked."""
+        return (self.start is None or row["period_end_us"] > self.start) and (
+            self.end is None or row["period_start_us"] < self.end
+        )
+
+
+def totals(opened: OpenSite, asked: Asked) -> list[Row]:
+    """Return totals per hour, gas day or month."""
+    kind = "month" if asked.by == "month" else "gas_day"
+    where: dict[str, Any] = {"kind": kind}
+    if asked.meter is not None:
+        where["meter"] = asked.meter
+    stored = _standing(
+        opened.ledger,
+        "open_total",
+        "total_revision",
+        ("meter", "kind", "period_start_us"),
+        where,
+    )
+    stored = [row for row in stored if asked.covers(row)]
+    stored.sort(key=lambda row: (row["period_start_us"], row["meter"]))
+    if asked.by == "hour":
+        return [hour for row in stored for hour in _hours(opened.ledger, row, asked)]
+    return [_total(row) for row in stored]
+
+
+def balances(opened: OpenSite, asked: Asked) -> list[Row]:
+    """Return balances per hour or gas day."""
+    stored = _standing(
+        opened.ledger,
+        "open_balance",
+        "balance_revision",
+        ("envelope", "kind", "period_start_us", "quantity"),
+        {},
+    )
+    stored = [row for row in stored if asked.covers(row)]
+    order = {"mass": 0, "base_volume": 1, "energy": 2}
+    stored.sort(key=lambda row: (row["period_start_us"], row["envelope"], order[row["quantity"]]))
+    if asked.by == "hour":
+        return [hour for row in stored for hour in _balance_hours(row, asked)]
+    return [_balance(row) for row in stored]
+
+
+def alerts(opened: OpenSite, asked: Asked) -> list[Row]:
+    """Return alerts, each as its last event left it; open ones first."""
+    last = {
+        row["alert_id"]: row
+        for row in opened.ledger.latest("alert_event", group=("alert_id",), number="number")
+    }
+    rows = []
+    for alert in opened.ledger.rows("alert", order=("since_us", "id")):
+        event = last[alert["id"]]
+        closed = event["state"] == "closed"
+        if asked.end is not None and alert["since_us"] >= asked.end:
+            continue
+        if asked.start is not None and closed and event["until_us"] <= asked.start:
+            continue
+        if asked.meter is not None and alert["subject"] != asked.meter:
+            continue
+        energy = event["effect_energy_J_per_day"]
+        rows.append(
+            {
+                "kind": alert["kind"],
+                "subject": alert["subject"],
+                "since": _time(alert["since_us"]),
+                "until": _time(event["until_us"]) if closed else None,
+                "severity": event["severity"],
+                "message": event["message"],
+                "evidence": json.loads(event["evidence"]),
+                "effect_base_volume_m3_per_day": event["effect_base_volume_m3_per_day"],
+                "effect_energy_MJ_per_day": None if energy is None else energy / 1e6,
+                "effect_money_per_day": event["effect_money_per_day"],
+                "currency": event["currency"],
+            }
+        )
+    return sorted(rows, key=lambda row: row["until"] is not None)
+
+
+def files(opened: OpenSite, _asked: Asked) -> list[Row]:
+    """Return every delivery with its latest fate, then the files that wait."""
+    fates = {
+        row["delivery_sequence"]: row
+        for row in opened.ledger.latest("fate", group=("delivery_sequence",), number="judgement")
+    }
+    rows = []
+    for delivery in opened.ledger.rows("delivery", order=("sequence",)):
+        fate = fates[delivery["sequence"]]
+        rows.append(
+            {
+                "source": delivery["source"],
+                "binding": delivery["binding"],
+                "name": delivery["name"],
+                "version": delivery["version"],
+                "verdict": fate["verdict"],
+                "reason": fate["reason"] or fate["warning"],
+                "arrived": _time(delivery["arrival_us"]),
+                **{
+                    f"{what}_{count}": fate[f"{what}_{count}"]
+                    for what in ("lines", "cells")
+                    for count in ("read", "used", "set_aside", "duplicate")
+                },
+                "lines_skipped": fate["lines_skipped"],
+                "sha256": delivery["raw_sha256"],
+            }
+        )
+    rows.extend(
+        {
+            "source": row["source"],
+            "binding": row["binding"],
+            "name": row["name"],
+            "verdict": "waiting",
+            "reason": row["reason"],
+        }
+        for row in opened.ledger.rows("waiting", order=("source", "name"))
+    )
+    return rows
+
+
+def passes(opened: OpenSite, _asked: Asked) -> list[Row]:
+    """Return every pass that changed something, and the heartbeat last."""
+    hashes = {
+        row["sequence"]: row["row_hash"]
+        for row in opened.ledger.rows("audit", columns=("sequence", "row_hash"))
+    }
+    rows = [
+        {
+            "sequence": row["sequence"],
+            "kind": row["kind"],
+            "started": _time(row["started_us"]),
+            "finished": _time(row["finished_us"]),
+            "now": _time(row["now_us"]),
+            "files": row["files"],
+            "readings": row["readings"],
+            "days": row["days"],
+            "note": _facts(row["note"]),
+            "row_hash": hashes.get(row["sequence"]),
+        }
+        for row in opened.ledger.rows("pass", order=("sequence",))
+    ]
+    rows.extend(
+        {
+            "kind": "heartbeat",
+            "now": _time(row["last_us"]),
+            "note": row["last_error"] or "nothing new",
+        }
+        for row in opened.ledger.rows("heartbeat")
+    )
+    return rows
+
+
+SHOWN = {
+    "totals": totals,
+    "balances": balances,
+    "alerts": alerts,
+    "files": files,
+    "passes": passes,
+}
+
+
+# --- totals ------------------------------------------------------------------------------------
+
+
+def _total(row: Mapping[str, Any]) -> Row:
+    flags, missing = json.loads(row["flags"]), json.loads(row["missing"])
+    energy = row["energy_J"]
+    return {
+        **_period(row),
+        "meter": row["meter"],
+        "base_pressure_kPa": _scaled(row["base_pressure_Pa"], 1e-3),
+        "base_temperature_degC": _celsius(row["base_temperature_K"]),
+        "line_volume_m3": row["line_volume_m3"],
+        "base_volume_m3": row["base_volume_m3"],
+        "mass_kg": row["mass_kg"],
+        "energy_MJ": None if energy is None else energy / 1e6,
+        "calorific_value_kind": row["calorific_value_kind"] if energy is not None else None,
+        "flow_time_s": row["flow_time_s"],
+        "measured_fraction": row["measured_fraction"],
+        "basis": row.get("basis", "measured"),
+        "flags": _flags(flags["shares"]),
+        "reason": _reasons(missing, row),
+        **_status(row),
+    }
+
+
+def _hours(ledger: Ledger, row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
+    where: dict[str, Any] = {"meter": row["meter"], "gas_day": row["gas_day"]}
+    revision = row.get("revision")
+    if revision:
+        where["revision"] = revision
+    stored = ledger.rows("hourly_record" if revision else "open_hourly", where=where)[0]
+    for number, hour in enumerate(decode_array(stored["statistics"], stored["columns"])):
+        value = {name: float(hour[at]) for name, at in HOURLY_INDEX.items()}
+        start = row["period_start_us"] + number * HOUR
+        shown = {
+            **row,
+            "period_start_us": start,
+            "period_end_us": start + round(value["duration"] * 1e6),
+            "line_volume_m3": _known(value["line_volume"]),
+            "base_volume_m3": _known(value["base_volume"]),
+            "mass_kg": _known(value["mass"]),
+            "energy_J": _known(value["energy"]),
+            "flow_time_s": value["flow_time"],
+            "measured_fraction": value["measured_time"] / value["duration"],
+            "flags": json.dumps({"shares": _known_shares(value)}),
+            "missing": json.dumps(
+                {k: value[f"lost_{k}"] for k in EVERY_LOSS if value[f"lost_{k}"]}
+            ),
+        }
+        if asked.covers(shown):
+            yield _total(shown)
+
+
+def _known_shares(value: Mapping[str, float]) -> dict[str, float]:
+    return {k: value[f"share_{k}"] for k in EVERY_FLAG if value[f"share_{k}"] > 0}
+
+
+def _flags(shares: Mapping[str, float]) -> str:
+    """Return flags with their shares of the flow time, in the order of `frames.FLAGS`."""
+    return "; ".join(f"{name} {shares[name]:.4g}" for name in EVERY_FLAG if name in shares)
+
+
+def _reasons(missing: Mapping[str, float], row: Mapping[str, Any]) -> str:
+    parts = [
+        f"{name.replace('_', ' ')} {missing[name]:g} s" for name in EVERY_LOSS if name in missing
+    ]
+    if row["kind"] == "month" and row["measured_fraction"] < 1 and not parts:
+        parts.append("gas days without readings or not yet over")
+    if row["mass_kg"] is not None:
+        if row["energy_J"] is None:
+            parts.append("energy: no calorific value")
+        if row["base_volume_m3"] is None:
+            parts.append("base volume: the base conditions change within the period")
+    parts.append(f"uncertainty: {NO_UNCERTAINTY}")
+    if row.get("reason"):
+        parts.append(f"revision: {row['reason']}")
+    return "; ".join(parts)
+
+
+# --- balances ----------------------------------------------------------------------------------
+
+
+def _balance(row: Mapping[str, Any]) -> Row:
+    reasons = json.loads(row["reason"])
+    scale = 1e-6 if row["quantity"] == "energy" else 1.0
+    return {
+        **_period(row),
+        "envelope": row["envelope"],
+        "quantity": row["quantity"],
+        "in": _scaled(row["inflow"], scale),
+        "out": _scaled(row["outflow"], scale),
+        "vented": _scaled(row["vented"], scale),
+        "storage_change": _scaled(row["storage_change"], scale),
+        "imbalance": _scaled(row["imbalance"], scale),
+        "expanded_uncertainty": None,
+        "tolerance": _scaled(row["tolerance"], scale),
+        "unit": UNIT[row["quantity"]],
+        "significant": _verdict(row["significant"], reasons.get("significant")),
+        "beyond_tolerance": _verdict(row["beyond_tolerance"], reasons.get("beyond_tolerance")),
+        "measured_fraction": row["measured_fraction"],
+        "reason": "; ".join(
+            text
+            for text in (
+                reasons.get("input"),
+                f"storage change: {reasons['storage_change']}"
+                if "storage_change" in reasons
+                else None,
+                f"uncertainty: {NO_UNCERTAINTY}",
+                f"revision: {row['revision_reason']}" if row.get("revision_reason") else None,
+            )
+            if text
+        ),
+        **_status(row),
+    }
+
+
+def _balance_hours(row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
+    reasons = json.loads(row["reason"])
+    by_hour: Sequence[str] = reasons.get("input_by_hour", [])
+    array = decode_array(row["hourly"], len(BALANCE_COLUMNS))
+    for number, hour in enumerate(array):
+        value = {name: _known(float(hour[at])) for at, name in enumerate(BALANCE_COLUMNS)}
+        start = row["period_start_us"] + number * HOUR
+        shown = {
+            **row,
+            "period_start_us": start,
+            "period_end_us": min(start + HOUR, row["period_end_us"]),
+            "inflow": value["in"],
+            "outflow": value["out"],
+            "vented": value["vented"],
+            "imbalance": value["imbalance"],
+            "tolerance": None,
+            "measured_fraction": value["measured_fraction"],
+            "significant": "cannot be judged",
+            "beyond_tolerance": "cannot be judged",
+            "reason": json.dumps(
+                {
+                    "input": by_hour[number] if by_hour else "",
+                    "storage_change": reasons.get("storage_change", ""),
+                    "significant": reasons.get("hours", ""),
+                    "beyond_tolerance": reasons.get("hours", ""),
+                }
+            ),
+        }
+        if asked.covers(shown):
+            yield _balance(shown)
+
+
+def _verdict(answer: str, reason: str | None) -> str:
+    return f"{answer}: {reason}" if reason and answer == "cannot be judged" else answer
+
+
+# --- shared ------------------------------------------------------------------------------------
+
+
+def _standing(
+    ledger: Ledger, open_table: str, table: str, group: Sequence[str], where: Mapping[str, Any]
+) -> list[Row]:
+    """Return open rows, and the latest revision of closed ones."""
+    return [
+        *ledger.rows(open_table, where=where),
+        *ledger.latest(table, group=group, number="revision", where=where),
+    ]
+
+
+def _period(row: Mapping[str, Any]) -> Row:
+    day = date.fromisoformat(row["gas_day"])
+    return {
+        "period_start": _time(row["period_start_us"]),
+        "period_end": _time(row["period_end_us"]),
+        "gas_day": None if row["kind"] == "month" else day.isoformat(),
+    }
+
+
+def _status(row: Mapping[str, Any]) -> Row:
+    revision = row.get("revision")
+    return {"status": "provisional" if revision else "open", "revision": revision}
+
+
+def _time(instant: int) -> str:
+    return from_microseconds(instant).isoformat().replace("+00:00", "Z")
+
+
+def _known(value: float) -> float | None:
+    return None if value != value else value  # noqa: PLR0124 - NaN is the one value unlike itself
+
+
+def _scaled(value: float | None, scale: float) -> float | None:
+    return None if value is None else value * scale + 0.0
+
+
+def _celsius(kelvin: float | None) -> float | None:
+    return None if kelvin is None else round(kelvin - 273.15, 9)
+
+
+def _facts(note: str) -> str:
+    return "; ".join(str(fact.get("fact")) for fact in json.loads(note).get("facts", []))
+
+
+def heading(what: str, opened: OpenSite, rows: Sequence[Mapping[str, Any]]) -> str:
+    """Return the title of a table: what the figures in it stand at."""
+    site = opened.site
+    if what == "totals" and rows:
+        bases = sorted({(row["base_pressure_kPa"], row["base_temperature_degC"]) for row in rows})
+        at = " or ".join(f"{p:g} kPa, {t:g} degC" for p, t in bases)
+        return f"{site.name}: corrected totals, base volume at {at}; {NO_UNCERTAINTY}"
+    if what == "balances" and rows:
+        return (
+            f"{site.name}: in = out + vented + imbalance; {NO_UNCERTAINTY}, storage not configured"
+        )
+    return f"{site.name}: {what}"

@@ -1,0 +1,284 @@
+"""Meters and envelopes: devices, the signals and gas they use, and what is balanced."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from meterfix.intake.site.findings import Findings, Place, instant_text
+from meterfix.intake.site.tables import EnvelopeTable, MeterTable, OrificeTable, SiteFile
+from meterfix.intake.site.terms import texts_with_places, value_place
+from meterfix.model.device import OrificePlate, Tappings
+from meterfix.model.gas import Gas
+from meterfix.model.site import (
+    Envelope,
+    Meter,
+    MeterTerms,
+    Tapping,
+    Thermometer,
+    Tolerance,
+)
+from meterfix.model.source import Quantity, Signal
+from meterfix.model.versions import Versions
+from meterfix.units import render
+
+Fields = dict[str, tuple[Place, Any]]
+"""Each key in force, where it was written and what was written."""
+
+_ROLES = {
+    "differential_pressure": Quantity.DIFFERENTIAL_PRESSURE,
+    "static_pressure": Quantity.STATIC_PRESSURE,
+    "temperature": Quantity.TEMPERATURE,
+}
+_METER_KEYS = ("gas", *_ROLES, "static_pressure_tapping", "thermometer", "low_flow_cut_off")
+_ORIFICE_KEYS = tuple(OrificeTable.model_fields)
+
+
+def build_meter(
+    name: str,
+    table: MeterTable,
+    file: SiteFile,
+    quantities: Mapping[str, Quantity | None],
+    findings: Findings,
+) -> Meter | None:
+    """Return one meter with every change of its terms."""
+    place: Place = ("meter", name)
+    before = len(findings.mistakes)
+    current: Fields = {key: ((*place, key), getattr(table, key)) for key in _METER_KEYS}
+    if table.orifice is not None:
+        at: Place = (*place, "orifice")
+        for key in table.orifice.model_fields_set:
+            current[f"orifice.{key}"] = ((*at, key), getattr(table.orifice, key))
+    stages: list[tuple[Place, str | None, MeterTerms | None]] = [
+        (place, table.since, _terms(place, current, file, quantities, findings))
+    ]
+    for n, change in enumerate(table.change or []):
+        at = (*place, "change", n)
+        overrides: Fields = {
+            key: ((*at, key), getattr(change, key))
+            for key in _METER_KEYS
+            if key in change.model_fields_set
+        }
+        if change.orifice is not None:
+            for key in change.orifice.model_fields_set:
+                overrides[f"orifice.{key}"] = ((*at, "orifice", key), getattr(change.orifice, key))
+        if not overrides and not change.model_fields_set & {*_METER_KEYS, "orifice"}:
+            findings.add(at, "changes nothing", f"give one of {', '.join(_METER_KEYS)}, orifice")
+        current = {**current, **overrides}
+        if change.since is not None:
+            stages.append((at, change.since, _terms(place, current, file, quantities, findings)))
+    terms = findings.versions(place, stages)
+    if terms is None or len(findings.mistakes) > before:
+        return None
+    return Meter(name, table.description or "", terms)
+
+
+def _terms(
+    place: Place,
+    fields: Fields,
+    file: SiteFile,
+    quantities: Mapping[str, Quantity | None],
+    findings: Findings,
+) -> MeterTerms | None:
+    at, gas = fields["gas"]
+    findings.reference(at, gas, "gas", file.gas or {})
+    for role, wanted in _ROLES.items():
+        at, signal = fields[role]
+        if findings.reference(at, signal, "signal", quantities) is None:
+            continue
+        measured = quantities[signal]
+        if measured is not None and measured is not wanted:
+            findings.add(
+                at,
+                f"signal '{signal}' measures a {measured.value.replace('_', ' ')}",
+                f"a signal of a {wanted.value.replace('_', ' ')} is needed",
+            )
+    at, text = fields["low_flow_cut_off"]
+    cut_off = findings.quantity(
+        at, text, "pressure", at_least=0.0, limit="a differential pressure of at least 0 is needed"
+    )
+    device = _orifice(place, fields, findings)
+    named = [fields[key][1] for key in _METER_KEYS]
+    if device is None or cut_off is None or None in named:
+        return None
+    return MeterTerms(
+        device=device,
+        gas=gas,
+        differential_pressure=fields["differential_pressure"][1],
+        static_pressure=fields["static_pressure"][1],
+        temperature=fields["temperature"][1],
+        static_pressure_tapping=Tapping(fields["static_pressure_tapping"][1]),
+        thermometer=Thermometer(fields["thermometer"][1]),
+        low_flow_cut_off=cut_off,
+    )
+
+
+def _orifice(place: Place, fields: Fields, findings: Findings) -> OrificePlate | None:
+    table: Place = (*place, "orifice")
+    given = {key: fields.get(f"orifice.{key}", ((*table, key), None)) for key in _ORIFICE_KEYS}
+    lengths = {
+        key: findings.quantity(*given[key], "length", above=0.0, limit="it must be above 0")
+        for key in ("bore", "pipe_diameter")
+    }
+    expansions = {
+        key: findings.quantity(
+            *given[key],
+            "per_temperature",
+            at_least=0.0,
+            below=1e-3,
+            limit="a metal has between 0 and 1e-3 / K",
+        )
+        for key in ("bore_expansion", "pipe_expansion")
+    }
+    temperatures = {
+        part: _reference_temperature(part, given, table, fields, findings)
+        for part in ("bore", "pipe")
+    }
+    bore, pipe = lengths["bore"], lengths["pipe_diameter"]
+    if bore is not None and pipe is not None and bore >= pipe:
+        findings.add(
+            given["bore"][0],
+            f"bore is {render(bore, 'mm'):g} mm in a pipe of {render(pipe, 'mm'):g} mm",
+            "it must be smaller than the pipe",
+        )
+        return None
+    tappings = given["tappings"][1]
+    values = [bore, pipe, *expansions.values(), *temperatures.values()]
+    numbers = [value for value in values if value is not None]
+    if len(numbers) < len(values) or tappings is None:
+        return None
+    return OrificePlate(
+        bore=numbers[0],
+        pipe_diameter=numbers[1],
+        tappings=Tappings(tappings),
+        bore_expansion=numbers[2],
+        pipe_expansion=numbers[3],
+        bore_reference_temperature=numbers[4],
+        pipe_reference_temperature=numbers[5],
+    )
+
+
+def _reference_temperature(
+    part: str,
+    given: Mapping[str, tuple[Place, Any]],
+    table: Place,
+    fields: Fields,
+    findings: Findings,
+) -> float | None:
+    """Return the part's own reference temperature, else the common one."""
+    own, common = f"{part}_reference_temperature", "reference_temperature"
+    key = own if f"orifice.{own}" in fields else common
+    if f"orifice.{key}" not in fields:
+        if any(name.startswith("orifice.") for name in fields):
+            findings.add(
+                (*table, common), "missing", "give one for both, or one for bore and pipe each"
+            )
+        return None
+    return findings.quantity(
+        *given[key],
+        "temperature",
+        above=200.0,
+        below=400.0,
+        limit="a temperature between 200 K and 400 K is needed",
+    )
+
+
+def check_use(
+    meters: Sequence[Meter], signals: Sequence[Signal], gases: Sequence[Gas], findings: Findings
+) -> None:
+    """Record what fits only once meters, signals and gases are known: cut-offs, gas terms."""
+    by_name = {signal.name: signal for signal in signals}
+    gas_terms = {gas.name: gas.terms for gas in gases}
+    for meter in meters:
+        for version in meter.terms.entries:
+            terms = version.value
+            signal = by_name.get(terms.differential_pressure)
+            for span in signal.transmitter.entries if signal else ():
+                upper = span.value.upper_range_value
+                if terms.low_flow_cut_off >= upper:
+                    findings.add(
+                        ("meter", meter.name, "low_flow_cut_off"),
+                        f"{render(terms.low_flow_cut_off, 'mbar'):g} mbar",
+                        f"it must be below the upper range value of {terms.differential_pressure}, "
+                        f"{render(upper, 'mbar'):g} mbar",
+                    )
+            history = gas_terms.get(terms.gas)
+            first = history.entries[0] if history and history.entries else None
+            if first and first.since is not None and (version.since or -(2**63)) < first.since:
+                findings.add(
+                    ("meter", meter.name, "gas"),
+                    f"gas '{terms.gas}' has terms only from {instant_text(first.since)} on, "
+                    f"the meter is in service from {instant_text(version.since)} on",
+                    "leave out the first `since` of the composition, or begin the meter later",
+                )
+
+
+# --- envelopes -------------------------------------------------------------------------------
+
+
+def build_envelope(
+    name: str, table: EnvelopeTable, file: SiteFile, findings: Findings
+) -> Envelope | None:
+    """Return one envelope."""
+    place: Place = ("envelope", name)
+    before = len(findings.mistakes)
+    known = file.meter or {}
+    used: dict[str, str] = {}
+    for key, meters in (("in", table.in_), ("out", table.out), ("vented", table.vented)):
+        for meter in meters or []:
+            at = (*place, key)
+            if findings.reference(at, meter, "meter", known) is None:
+                continue
+            if meter in used:
+                findings.add(
+                    at, f"meter '{meter}' counts as {used[meter]} already", "name a meter once"
+                )
+            used.setdefault(meter, key)
+    if "energy" in (table.quantities or []):
+        _check_energy(place, used, file, findings)
+    entries: list[tuple[Place, str | None, Tolerance | None]] = []
+    for at, since, text in texts_with_places((*place, "tolerance"), table.tolerance):
+        fraction = findings.quantity(
+            value_place(at),
+            text,
+            "fraction",
+            at_least=0.0,
+            below=1.0,
+            limit="a part of what went in is needed, from 0 % to below 100 %",
+        )
+        entries.append((at, since, None if fraction is None else Tolerance(fraction)))
+    tolerance: Versions[Tolerance] | None = None
+    if table.tolerance is not None:
+        tolerance = findings.versions((*place, "tolerance"), entries, what="tolerance")
+    if tolerance is None or len(findings.mistakes) > before:
+        return None
+    asked = set(table.quantities or []) | {"mass"}
+    return Envelope(
+        name=name,
+        description=table.description or "",
+        inflow=tuple(table.in_),
+        outflow=tuple(table.out),
+        vented=tuple(table.vented or []),
+        quantities=tuple(q for q in ("mass", "base_volume", "energy") if q in asked),
+        tolerance=tolerance,
+    )
+
+
+def _check_energy(
+    place: Place, meters: Mapping[str, str], file: SiteFile, findings: Findings
+) -> None:
+    """Record what keeps an envelope from having an energy."""
+    at = (*place, "quantities")
+    if file.contract is not None and "energy" not in file.contract.model_fields_set:
+        findings.add(at, "'energy' without [contract.energy]", "say there how energy is reckoned")
+    for meter in meters:
+        table = (file.meter or {})[meter]
+        names = [table.gas, *(change.gas for change in table.change or [])]
+        for name in dict.fromkeys(names):
+            gas = (file.gas or {}).get(name) if name is not None else None
+            if gas is not None and "calorific_value" not in gas.model_fields_set:
+                findings.add(
+                    at,
+                    f"'energy', but gas '{name}' of meter '{meter}' has no calorific value",
+                    f"give [gas.{name}.calorific_value] or leave out 'energy'",
+                )

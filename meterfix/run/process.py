@@ -1,0 +1,88 @@
+"""Passes until nothing is new."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+from meterfix.calc.gas.properties import GasLibrary
+from meterfix.errors import MeterfixError
+from meterfix.run import clock
+from meterfix.run.compute import Report
+from meterfix.run.opening import OpenSite
+from meterfix.run.passes import Outcome, PassWork, heartbeat
+
+
+@dataclass
+class Processed:
+    """What the passes of one call did."""
+
+    passes: int = 0
+    files: int = 0
+    readings: int = 0
+    days: int = 0
+    rejected: list[str] = field(default_factory=list)
+    waiting: tuple[str, ...] = ()
+    crashes: list[str] = field(default_factory=list)
+
+    def add(self, outcome: Outcome) -> None:
+        """Count a pass."""
+        self.passes += outcome.sequence > 0
+        self.files += outcome.files
+        self.readings += outcome.readings
+        self.days += outcome.days
+        self.rejected.extend(outcome.rejected)
+        self.waiting = outcome.waiting
+
+
+def process(
+    opened: OpenSite,
+    now: int | None = None,
+    report: Report | None = None,
+    tell: Callable[[str], None] | None = None,
+) -> Processed:
+    """Run passes until nothing is new.
+
+    A pass that fails while it takes files in leaves a mark beside them; after two failures
+    each of them is taken in alone, and one that fails alone is quarantined. So one file cannot
+    keep the rest out.
+
+    Parameters
+    ----------
+    opened : the site and its ledger.
+    now : the instant [UTC us] that the passes take for the present; None: the clock's.
+    report : progress.
+    tell : called with a sentence about each failure.
+
+    Raises
+    ------
+    LedgerBusyError
+        If another process works on this ledger.
+    MeterfixError
+        If a pass fails for a reason that is not a file's.
+    """
+    done = Processed()
+    gases = GasLibrary()
+    ledger = opened.ledger
+    with ledger.writer():
+        more = True
+        while more:
+            instant = clock.now() if now is None else now
+            try:
+                outcome = PassWork(opened, instant, clock.now(), gases, report).run()
+            except MeterfixError:
+                raise
+            except Exception as error:
+                # whatever a file's bytes can do to the code that reads them ends here, once
+                # per attempt: the marks beside the files make the next pass a narrower one
+                if not ledger.rows("attempt", columns=("name",)):
+                    raise
+                sentence = f"a pass failed: {type(error).__name__}: {error}"
+                done.crashes.append(sentence)
+                ledger.write_outside(replace={"heartbeat": [heartbeat(instant, sentence)]})
+                if tell is not None:
+                    tell(sentence)
+                continue
+            done.add(outcome)
+            more = outcome.more
+    return done

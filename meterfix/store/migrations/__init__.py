@@ -1,0 +1,1 @@
+"""Alembic migrations of the ledger's tables; they travel inside the package."""

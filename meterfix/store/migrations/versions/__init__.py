@@ -1,0 +1,1 @@
+"""One file per revision; a released revision is never edited."""
