@@ -291,7 +291,14 @@ def _article(name: str) -> str:
     return f"{'an' if name[0] in 'aeiou' else 'a'} {name}"
 
 
-def _description(exponents: _Exponents) -> str:
+def _is_per_volume(unit: str) -> bool:
+    """Tell an energy per volume from a pressure: they have one dimension, but not one meaning."""
+    return _PER_VOLUME.search(unit) is not None
+
+
+def _description(exponents: _Exponents, unit: str) -> str:
+    if exponents == _DIMENSIONS["pressure"][0]:
+        return "an energy per volume" if _is_per_volume(unit) else "a pressure"
     same = [name for name, (known, _) in _DIMENSIONS.items() if known == exponents]
     words = " or ".join(
         name.replace("_", " ") for name in same if name != "temperature_difference"
@@ -312,19 +319,14 @@ def _wanted(text: str, unit: str, dimension: Dimension) -> _Unit:
         raise UnitError(
             f"'{text}' has no unit; {_article(name)} is needed, for example '{example}'"
         )
-    if found.exponents != exponents:
+    other_meaning = exponents == _DIMENSIONS["pressure"][0] and _is_per_volume(unit) != (
+        dimension == "energy_per_volume"
+    )
+    if found.exponents != exponents or other_meaning:
         raise UnitError(
-            f"'{text}' is {_description(found.exponents)} (unit '{unit.strip()}'); "
+            f"'{text}' is {_description(found.exponents, unit)} (unit '{unit.strip()}'); "
             f"{_article(name)} is needed, for example '{example}'"
         )
-    if dimension in {"pressure", "energy_per_volume"}:
-        # a pressure and an energy per volume have one dimension; nobody means one by the other
-        divided = _PER_VOLUME.search(unit) is not None
-        if divided != (dimension == "energy_per_volume"):
-            raise UnitError(
-                f"'{text}' has the unit '{unit.strip()}'; "
-                f"{_article(name)} is needed, for example '{example}'"
-            )
     if dimension == "temperature_difference":
         return _Unit(found.scale, Fraction(0), found.exponents)
     return found

@@ -8,9 +8,10 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
-from meterfix.errors import MeterfixError
+from meterfix.errors import LedgerError, MeterfixError
 from meterfix.intake.site import anchored, read_site, resolve_secrets
 from meterfix.model.site import Site
+from meterfix.run.gas_check import check_gases
 from meterfix.run.signals import SiteIndex
 from meterfix.store.ledger import Ledger
 
@@ -41,21 +42,34 @@ def open_site(path: Path, *, read_only: bool = False) -> Iterator[OpenSite]:
     Raises
     ------
     SiteFileError
-        If the site file has mistakes; all of them are in it.
+        If the site file has mistakes, all of which are in it, or names a gas that cannot be
+        computed.
     LedgerError
         If database, archive and anchor do not belong together or cannot be opened.
     """
     path = path.absolute()
     site = anchored(read_site(path), path.parent)
-    ledger = Ledger.open(
-        resolve_secrets(site.database_url, secret),
-        Path(site.archive_folder),
-        read_only=read_only,
-    )
+    database, archive = resolve_secrets(site.database_url, secret), Path(site.archive_folder)
+    if not read_only and not _in_use(site, database, archive):
+        check_gases(site, path)
+    ledger = Ledger.open(database, archive, read_only=read_only)
     try:
         yield OpenSite(path, SiteIndex(site), ledger)
     finally:
         ledger.close()
+
+
+def _in_use(site: Site, database: str, archive: Path) -> bool:
+    """Return whether a pass has computed with this very site file.
+
+    Then its gases can be computed, and a pass that finds nothing new is spared the seconds that
+    loading the gas models takes.
+    """
+    try:
+        with Ledger.open(database, archive, read_only=True) as ledger:
+            return bool(ledger.rows("site_version", where={"digest": site.digest}))
+    except LedgerError:
+        return False  # there is none yet, or opening it to be written says what is wrong
 
 
 def secret(kind: str, name: str) -> str:

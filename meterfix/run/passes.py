@@ -11,7 +11,7 @@ from typing import Any
 
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.frames import CALCULATION_VERSION
-from meterfix.run import alerts
+from meterfix.run import alerts, clock
 from meterfix.run.book import Book
 from meterfix.run.compute import Key, Report, compute
 from meterfix.run.conflicts import conflict_rows
@@ -33,6 +33,7 @@ from meterfix.store.fingerprint import fingerprint
 from meterfix.store.ledger import Ledger, PassRecord
 
 ACTOR = "meterfix"
+_ATTEMPT = ("source", "binding", "name", "raw_sha256")
 
 
 @dataclass(frozen=True)
@@ -61,6 +62,8 @@ class PassWork:
     gases: GasLibrary
     report: Report | None = None
     known: Known = field(init=False)
+    storing: bool = False
+    """The files have been read and their figures computed; what fails now is not theirs."""
 
     def run(self) -> Outcome:
         """Do the pass under the writer's lock, and commit what it changes."""
@@ -102,6 +105,7 @@ class PassWork:
             rows.setdefault(table, []).extend(added)
         rows["alert"] = alert_book.alerts
         rows["alert_event"] = alert_book.events
+        self.storing = True
         return self._commit(rows, settled, taken, verdicts, more=more)
 
     # --- taking files in ---------------------------------------------------------------------
@@ -175,6 +179,16 @@ class PassWork:
         ]
         if rows:
             self.opened.ledger.write_outside(replace={"attempt": rows})
+
+    def forgive(self) -> None:
+        """Take the marks back off the files of a pass that failed for no fault of theirs."""
+        marks = [
+            {**dict(zip(_ATTEMPT, key, strict=True)), "crashes": crashes, "alone": 0}
+            for key, crashes in self.known.attempts.items()
+        ]
+        stored = self.opened.ledger.rows("attempt", columns=_ATTEMPT)
+        gone = [row for row in stored if tuple(row.values()) not in self.known.attempts]
+        self.opened.ledger.write_outside(replace={"attempt": marks}, remove={"attempt": gone})
 
     # --- figures -----------------------------------------------------------------------------
 
@@ -274,8 +288,7 @@ class PassWork:
         replace["heartbeat"] = [heartbeat(self.now, "")]
         remove = dict(settled.remove)
         remove["attempt"] = [
-            dict(zip(("source", "binding", "name", "raw_sha256"), _attempt_key(f), strict=True))
-            for f in taken.arrived
+            dict(zip(_ATTEMPT, _attempt_key(f), strict=True)) for f in taken.arrived
         ]
         pass_id = str(uuid.uuid4())
         rows["pass"] = [
@@ -285,7 +298,7 @@ class PassWork:
                 "kind": "pass",
                 "now_us": self.now,
                 "started_us": self.started,
-                "finished_us": self.now,
+                "finished_us": clock.now(),
                 "files": len(taken.arrived),
                 "readings": verdicts.fresh,
                 "days": len(settled.changed_days),
@@ -363,7 +376,7 @@ class PassWork:
                             "kind": kind,
                             "now_us": self.now,
                             "started_us": self.started,
-                            "finished_us": self.now,
+                            "finished_us": clock.now(),
                             "files": 0,
                             "readings": 0,
                             "days": 0,

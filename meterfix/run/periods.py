@@ -50,9 +50,7 @@ def touched(
     return reached, opened
 
 
-def _days_with(
-    calendar: GasDayCalendar, instants: Instants, *, stands_alone: bool
-) -> set[date]:
+def _days_with(calendar: GasDayCalendar, instants: Instants, *, stands_alone: bool) -> set[date]:
     """Return the gas days that hold a reading, by the rule for a reading at a day's start."""
     days: set[date] = set()
     first, last = int(instants.min()), int(instants.max())

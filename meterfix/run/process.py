@@ -68,13 +68,17 @@ def process(
         more = True
         while more:
             instant = clock.now() if now is None else now
+            work = PassWork(opened, instant, clock.now(), gases, report)
             try:
-                outcome = PassWork(opened, instant, clock.now(), gases, report).run()
+                outcome = work.run()
             except MeterfixError:
                 raise
             except Exception as error:
                 # whatever a file's bytes can do to the code that reads them ends here, once
                 # per attempt: the marks beside the files make the next pass a narrower one
+                if work.storing:
+                    work.forgive()
+                    raise
                 if not ledger.rows("attempt", columns=("name",)):
                     raise
                 sentence = f"a pass failed: {type(error).__name__}: {error}"

@@ -131,6 +131,7 @@ class Ledger:
                 self._writing, self._recovery = connection, None
                 try:
                     yield
+                    self._checkpoint(connection)
                 finally:
                     self._writing = self._recovery = None
         finally:
@@ -138,6 +139,14 @@ class Ledger:
             if engine is not None:
                 engine.dispose()
             self._lock.release()
+
+    @staticmethod
+    def _checkpoint(connection: Connection) -> None:
+        """Bring SQLite's write-ahead log home, as far as readers allow, while the lock is held."""
+        if connection.dialect.name == "sqlite":
+            # on the driver's connection: a checkpoint cannot run inside a transaction
+            driver: Any = connection.connection.driver_connection
+            driver.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
 
     def _lock_server(self, connection: Connection) -> None:
         """Take PostgreSQL's advisory lock too: two hosts do not share a file lock."""

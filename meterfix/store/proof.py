@@ -107,8 +107,8 @@ def _chain_findings(
         int(row["sequence"]): row
         for row in query.select_rows(connection, "audit", {"shard": SHARD}, ("sequence",))
     }
-    for row in query.select_rows(connection, "audit", {"shard": query.Between(SHARD + 1, None)}):
-        yield Finding("chain", f"audit shard {row['shard']}", "no such shard is in use")
+    for other in query.select_rows(connection, "audit", {"shard": query.Between(SHARD + 1, None)}):
+        yield Finding("chain", f"audit shard {other['shard']}", "no such shard is in use")
     stored = _stored_digests(connection, report)
     path = state.path()
     announced = {intent.sequence: intent.row_hash for intent in state.open}

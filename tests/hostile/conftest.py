@@ -1,6 +1,6 @@
 """Layouts and the two ways of reading, for every test of bad input."""
 
-from dataclasses import replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pytest
@@ -69,6 +69,35 @@ LAYOUT = Layout(
 """Times from 2000 on."""
 
 
+@dataclass(frozen=True)
+class Case:
+    """What a file holds and what must come of it."""
+
+    number: int
+    """In the list of hostile inputs that every layout is measured against; 0: not in it."""
+    what: str
+    content: bytes
+    used: dict[str, list[int]] = field(default_factory=dict)
+    """Line numbers of the good cells, by column."""
+    problems: tuple[tuple[int, str, str], ...] = ()
+    """(line, cell, part of the reason): exactly these."""
+    rejected: str = ""
+    warning: str = ""
+    skipped: int = 1
+    layout: dict[str, object] = field(default_factory=dict)
+    fast: bool | None = None
+    """Whether the fast path must accept it (True) or decline it (False); None: either."""
+
+
+def pytest_generate_tests(metafunc):
+    """Give the cases of a module to its tests: all of them, or those that more lines leave be."""
+    cases = [Case(**fields) for fields in getattr(metafunc.module, "CASES", [])]
+    lasting = [c for c in cases if c.used and not c.rejected and c.number not in {2, 4, 42, 43}]
+    for name, chosen in (("case", cases), ("lasting_case", lasting)):
+        if name in metafunc.fixturenames and hasattr(metafunc.module, "CASES"):
+            metafunc.parametrize(name, chosen, ids=[f"{c.number}: {c.what[:60]}" for c in chosen])
+
+
 def plain(parsed: ParsedFile) -> dict[str, object]:
     """Return everything that a parsed file says, comparable to the last bit."""
     out = {
@@ -135,7 +164,7 @@ def read_both_ways(
 
 @pytest.fixture(scope="session")
 def layout():
-    """A function that returns the plain layout with some of its fields changed."""
+    """Return a function that gives the plain layout with some of its fields changed."""
 
     def changed(**fields) -> Layout:
         return replace(LAYOUT, **fields)
@@ -145,17 +174,71 @@ def layout():
 
 @pytest.fixture(scope="session")
 def both():
-    """`read_both_ways`."""
+    """Return `read_both_ways`."""
     return read_both_ways
 
 
 @pytest.fixture(scope="session")
 def as_plain():
-    """`plain`."""
+    """Return `plain`."""
     return plain
 
 
 @pytest.fixture(scope="session")
 def arrival() -> int:
-    """When every file of these tests arrived."""
+    """Return when every file of these tests arrived."""
     return ARRIVAL
+
+
+@pytest.fixture(scope="session")
+def check_fate():
+    """Return the check that a case has exactly its fate."""
+
+    def check(case: Case) -> None:
+        parsed, accepted = read_both_ways(case.content, replace(LAYOUT, **case.layout))
+        assert case.rejected in parsed.rejected
+        assert bool(parsed.rejected) == bool(case.rejected)
+        if case.fast is not None:
+            assert accepted == case.fast
+        if case.rejected:
+            assert parsed.lines_read == 0
+            assert parsed.cells == ()
+            return
+        assert {cells.column: cells.lines.tolist() for cells in parsed.cells} == case.used
+        assert len(parsed.problems) == len(case.problems)
+        for problem, (line, cell, part) in zip(parsed.problems, case.problems, strict=True):
+            assert (problem.line, problem.cell) == (line, cell)
+            assert part in problem.reason
+        assert case.warning in parsed.warning
+        assert bool(parsed.warning) == bool(case.warning)
+        assert parsed.lines_skipped == case.skipped
+
+    return check
+
+
+@pytest.fixture(scope="session")
+def check_lasting():
+    """Return the check that a case keeps its fate when 200 good lines follow it."""
+
+    def check(case: Case) -> None:
+        declared = replace(LAYOUT, **case.layout)
+        alone, _ = read_both_ways(case.content, declared)
+        time = "2026-09-{:02}T{:02}:00:00Z"
+        if declared.time_format.startswith("%Y-%m-%d %H"):
+            time = "2026-09-{:02} {:02}:00:00" + ("+00:00" if "%z" in declared.time_format else "")
+        rows = []
+        for n in range(200):
+            value = f"{n}{declared.decimal_mark}25"
+            cells = [time.format(1 + n // 24, n % 24), *([value] * (len(alone.header) - 1))]
+            rows.append(declared.delimiter.join(cells))
+        parsed, _ = read_both_ways(case.content + "\n".join(rows).encode() + b"\n", declared)
+        assert parsed.lines_read == alone.lines_read + 200
+        assert plain(parsed)["problems"] == plain(alone)["problems"]
+        assert parsed.cells_set_aside == alone.cells_set_aside
+        for cells, first in zip(parsed.cells, alone.cells, strict=True):
+            count = len(first.lines)
+            assert cells.values[:count].tolist() == first.values.tolist()
+            assert cells.instants[:count].tolist() == first.instants.tolist()
+            assert len(cells.lines) == count + 200
+
+    return check

@@ -52,7 +52,7 @@ CLOCKS = {"local, order in the file": "Europe/Berlin", "local, half-hour change"
 
 def written(build: str, fields: dict, rows: int, seed: int, line_end: str = "\n") -> bytes:
     """Return a valid file of a build: a row a minute across a clock change."""
-    draw = random.Random(seed)
+    draw = random.Random(seed)  # noqa: S311 - rows of a file, no secret
     delimiter = fields.get("delimiter", ",")
     mark = fields.get("decimal_mark", ".")
     time_columns = fields.get("time_columns", ("time",))

@@ -61,7 +61,11 @@ def resolve(names: tuple[str, ...], layout: Layout) -> Heading | Unfit:
         names=names,
         times=tuple(names.index(name) for name in layout.time_columns),
         columns=tuple((n, index[name]) for n, name in enumerate(names) if name in index),
-        unknown=tuple(name for name in names if name not in index and name not in expected),
+        unknown=tuple(
+            name or f"(column {n}, unnamed)"
+            for n, name in enumerate(names, start=1)
+            if name not in index and name not in expected
+        ),
     )
 
 

@@ -19,6 +19,7 @@ Place = tuple[str | int, ...]
 
 Value = TypeVar("Value")
 
+_SECTIONS = ("source", "signal", "gas", "meter", "envelope")
 _BARE = re.compile(r"[A-Za-z0-9_-]+")
 
 
@@ -27,7 +28,7 @@ def where(file: str, place: Place) -> str:
     if not place:
         return file
     *table, key = place
-    if isinstance(key, int) or not table:
+    if isinstance(key, int) or not table or (len(table) == 1 and table[0] in _SECTIONS):
         table, key = [*table, key], ""
     words = ""
     for step in table:

@@ -271,14 +271,16 @@ def _check_energy(
     at = (*place, "quantities")
     if file.contract is not None and "energy" not in file.contract.model_fields_set:
         findings.add(at, "'energy' without [contract.energy]", "say there how energy is reckoned")
+    users: dict[str, dict[str, None]] = {}
     for meter in meters:
         table = (file.meter or {})[meter]
-        names = [table.gas, *(change.gas for change in table.change or [])]
-        for name in dict.fromkeys(names):
-            gas = (file.gas or {}).get(name) if name is not None else None
-            if gas is not None and "calorific_value" not in gas.model_fields_set:
-                findings.add(
-                    at,
-                    f"'energy', but gas '{name}' of meter '{meter}' has no calorific value",
-                    f"give [gas.{name}.calorific_value] or leave out 'energy'",
-                )
+        for name in (table.gas, *(change.gas for change in table.change or [])):
+            gas = (file.gas or {}).get(name or "")
+            if name and gas is not None and "calorific_value" not in gas.model_fields_set:
+                users.setdefault(name, {})[meter] = None
+    for name, using in users.items():
+        findings.add(
+            at,
+            f"'energy', but gas '{name}' of {', '.join(using)} has no calorific value",
+            f"give [gas.{name}.calorific_value] or leave out 'energy'",
+        )

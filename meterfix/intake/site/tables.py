@@ -329,6 +329,9 @@ class SiteFile(Table):
 def schema() -> dict[str, Any]:
     """Return the JSON Schema (2020-12) of a site file read as TOML."""
     described = SiteFile.model_json_schema(by_alias=True)
+    for named in described["properties"].values():
+        if "patternProperties" in named:
+            named["additionalProperties"] = False
     return {
         "$schema": "https://json-schema.org/draft/2020-12/schema",
         **described,

@@ -124,6 +124,7 @@ def test_the_example_conforms(example):
         (("meter", "FT-101", "orifice", "bore"), 92.4),
         (("gas", "natural_gas", "isentropic_exponent"), 0.5),
         (("envelope", "works", "quantities"), ["volume"]),
+        (("envelope", "works/main"), {"in": ["FT-101"], "out": ["FT-201"], "tolerance": "1 %"}),
     ],
 )
 def test_the_schema_refuses_what_the_reader_refuses(example, steps, value):
