@@ -223,8 +223,6 @@ def show(
         from meterfix.faces import render, shown
         from meterfix.run.opening import open_site
 
-        if what == "balances" and by == "month":
-            raise click.UsageError("balances are kept per hour and gas day")
         with open_site(site, read_only=True) as opened:
             if meter is not None and what in {"totals", "alerts"}:
                 known = sorted(opened.index.meters)

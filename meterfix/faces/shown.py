@@ -1,44 +1,27 @@
-"""Rows of `show`, read from the ledger and named as the contract names them; never computed."""
+"""Rows of `show totals` and `show balances`: read from the ledger, named as promised.
+
+Nothing is computed here but the unit of a figure.
+"""
 
 from __future__ import annotations
 
 import json
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from datetime import date
 from typing import Any
 
 from meterfix.calc.balance.envelopes import BALANCE_COLUMNS
+from meterfix.faces.asked import Asked, Row, time_text
 from meterfix.frames import FLAGS, HOURLY_INDEX, MISSING
-from meterfix.model.calendar import HOUR, from_microseconds
+from meterfix.model.calendar import HOUR
 from meterfix.run.opening import OpenSite
 from meterfix.store.ledger import Ledger
 from meterfix.store.values import decode_array
-
-Row = dict[str, Any]
 
 NO_UNCERTAINTY = "no uncertainty yet"
 UNIT = {"mass": "kg", "base_volume": "m3", "energy": "MJ"}
 EVERY_FLAG = [name for name, _ in FLAGS]
 EVERY_LOSS = [name for name, _ in MISSING]
-
-
-@dataclass(frozen=True)
-class Asked:
-    """What the user wants to see."""
-
-    by: str = "gas-day"
-    meter: str | None = None
-    start: int | None = None
-    """Periods that end after this instant [UTC us]."""
-    end: int | None = None
-    """Periods that begin before this instant [UTC us]."""
-
-    def covers(self, row: Mapping[str, Any]) -> bool:
-        """Return whether a row's period shares time with what is asked."""
-        return (self.start is None or row["period_end_us"] > self.start) and (
-            self.end is None or row["period_start_us"] < self.end
-        )
 
 
 def totals(opened: OpenSite, asked: Asked) -> list[Row]:
@@ -62,136 +45,23 @@ def totals(opened: OpenSite, asked: Asked) -> list[Row]:
 
 
 def balances(opened: OpenSite, asked: Asked) -> list[Row]:
-    """Return balances per hour or gas day."""
+    """Return balances per hour, gas day or month."""
     stored = _standing(
         opened.ledger,
         "open_balance",
         "balance_revision",
         ("envelope", "kind", "period_start_us", "quantity"),
-        {},
+        {"kind": "month" if asked.by == "month" else "gas_day"},
     )
-    stored = [row for row in stored if asked.covers(row)]
+    among = None if asked.meter is None else _envelopes_with(opened, asked.meter)
+    stored = [
+        row for row in stored if asked.covers(row) and (among is None or row["envelope"] in among)
+    ]
     order = {"mass": 0, "base_volume": 1, "energy": 2}
     stored.sort(key=lambda row: (row["period_start_us"], row["envelope"], order[row["quantity"]]))
     if asked.by == "hour":
         return [hour for row in stored for hour in _balance_hours(row, asked)]
     return [_balance(row) for row in stored]
-
-
-def alerts(opened: OpenSite, asked: Asked) -> list[Row]:
-    """Return alerts, each as its last event left it; open ones first."""
-    last = {
-        row["alert_id"]: row
-        for row in opened.ledger.latest("alert_event", group=("alert_id",), number="number")
-    }
-    rows = []
-    for alert in opened.ledger.rows("alert", order=("since_us", "id")):
-        event = last[alert["id"]]
-        closed = event["state"] == "closed"
-        if asked.end is not None and alert["since_us"] >= asked.end:
-            continue
-        if asked.start is not None and closed and event["until_us"] <= asked.start:
-            continue
-        if asked.meter is not None and alert["subject"] != asked.meter:
-            continue
-        energy = event["effect_energy_J_per_day"]
-        rows.append(
-            {
-                "kind": alert["kind"],
-                "subject": alert["subject"],
-                "since": _time(alert["since_us"]),
-                "until": _time(event["until_us"]) if closed else None,
-                "severity": event["severity"],
-                "message": event["message"],
-                "evidence": json.loads(event["evidence"]),
-                "effect_base_volume_m3_per_day": event["effect_base_volume_m3_per_day"],
-                "effect_energy_MJ_per_day": None if energy is None else energy / 1e6,
-                "effect_money_per_day": event["effect_money_per_day"],
-                "currency": event["currency"],
-            }
-        )
-    return sorted(rows, key=lambda row: row["until"] is not None)
-
-
-def files(opened: OpenSite, _asked: Asked) -> list[Row]:
-    """Return every delivery with its latest fate, then the files that wait."""
-    fates = {
-        row["delivery_sequence"]: row
-        for row in opened.ledger.latest("fate", group=("delivery_sequence",), number="judgement")
-    }
-    rows = []
-    for delivery in opened.ledger.rows("delivery", order=("sequence",)):
-        fate = fates[delivery["sequence"]]
-        rows.append(
-            {
-                "source": delivery["source"],
-                "binding": delivery["binding"],
-                "name": delivery["name"],
-                "version": delivery["version"],
-                "verdict": fate["verdict"],
-                "reason": fate["reason"] or fate["warning"],
-                "arrived": _time(delivery["arrival_us"]),
-                **{
-                    f"{what}_{count}": fate[f"{what}_{count}"]
-                    for what in ("lines", "cells")
-                    for count in ("read", "used", "set_aside", "duplicate")
-                },
-                "lines_skipped": fate["lines_skipped"],
-                "sha256": delivery["raw_sha256"],
-            }
-        )
-    rows.extend(
-        {
-            "source": row["source"],
-            "binding": row["binding"],
-            "name": row["name"],
-            "verdict": "waiting",
-            "reason": row["reason"],
-        }
-        for row in opened.ledger.rows("waiting", order=("source", "name"))
-    )
-    return rows
-
-
-def passes(opened: OpenSite, _asked: Asked) -> list[Row]:
-    """Return every pass that changed something, and the heartbeat last."""
-    hashes = {
-        row["sequence"]: row["row_hash"]
-        for row in opened.ledger.rows("audit", columns=("sequence", "row_hash"))
-    }
-    rows = [
-        {
-            "sequence": row["sequence"],
-            "kind": row["kind"],
-            "started": _time(row["started_us"]),
-            "finished": _time(row["finished_us"]),
-            "now": _time(row["now_us"]),
-            "files": row["files"],
-            "readings": row["readings"],
-            "days": row["days"],
-            "note": _facts(row["note"]),
-            "row_hash": hashes.get(row["sequence"]),
-        }
-        for row in opened.ledger.rows("pass", order=("sequence",))
-    ]
-    rows.extend(
-        {
-            "kind": "heartbeat",
-            "now": _time(row["last_us"]),
-            "note": row["last_error"] or "nothing new",
-        }
-        for row in opened.ledger.rows("heartbeat")
-    )
-    return rows
-
-
-SHOWN = {
-    "totals": totals,
-    "balances": balances,
-    "alerts": alerts,
-    "files": files,
-    "passes": passes,
-}
 
 
 # --- totals ------------------------------------------------------------------------------------
@@ -214,7 +84,9 @@ def _total(row: Mapping[str, Any]) -> Row:
         "measured_fraction": row["measured_fraction"],
         "basis": row.get("basis", "measured"),
         "flags": _flags(flags["shares"]),
+        "shares": flags["shares"],
         "reason": _reasons(missing, row),
+        "losses": _losses(missing, row),
         **_status(row),
     }
 
@@ -256,12 +128,18 @@ def _flags(shares: Mapping[str, float]) -> str:
     return "; ".join(f"{name} {shares[name]:.4g}" for name in EVERY_FLAG if name in shares)
 
 
-def _reasons(missing: Mapping[str, float], row: Mapping[str, Any]) -> str:
-    parts = [
+def _losses(missing: Mapping[str, float], row: Mapping[str, Any]) -> list[str]:
+    """Return why time is not measured, in the order of `frames.MISSING`."""
+    losses = [
         f"{name.replace('_', ' ')} {missing[name]:g} s" for name in EVERY_LOSS if name in missing
     ]
-    if row["kind"] == "month" and row["measured_fraction"] < 1 and not parts:
-        parts.append("gas days without readings or not yet over")
+    if row["kind"] == "month" and row["measured_fraction"] < 1 and not losses:
+        losses.append("gas days without readings or not yet over")
+    return losses
+
+
+def _reasons(missing: Mapping[str, float], row: Mapping[str, Any]) -> str:
+    parts = _losses(missing, row)
     if row["mass_kg"] is not None:
         if row["energy_J"] is None:
             parts.append("energy: no calorific value")
@@ -294,6 +172,7 @@ def _balance(row: Mapping[str, Any]) -> Row:
         "significant": _verdict(row["significant"], reasons.get("significant")),
         "beyond_tolerance": _verdict(row["beyond_tolerance"], reasons.get("beyond_tolerance")),
         "measured_fraction": row["measured_fraction"],
+        "losses": [reasons["input"]] if reasons.get("input") else [],
         "reason": "; ".join(
             text
             for text in (
@@ -342,6 +221,14 @@ def _balance_hours(row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
             yield _balance(shown)
 
 
+def _envelopes_with(opened: OpenSite, meter: str) -> set[str]:
+    return {
+        envelope.name
+        for envelope in opened.site.envelopes
+        if meter in {*envelope.inflow, *envelope.outflow, *envelope.vented}
+    }
+
+
 def _verdict(answer: str, reason: str | None) -> str:
     return f"{answer}: {reason}" if reason and answer == "cannot be judged" else answer
 
@@ -362,19 +249,16 @@ def _standing(
 def _period(row: Mapping[str, Any]) -> Row:
     day = date.fromisoformat(row["gas_day"])
     return {
-        "period_start": _time(row["period_start_us"]),
-        "period_end": _time(row["period_end_us"]),
+        "period_start": time_text(row["period_start_us"]),
+        "period_end": time_text(row["period_end_us"]),
         "gas_day": None if row["kind"] == "month" else day.isoformat(),
+        "month": f"{day:%Y-%m}",
     }
 
 
 def _status(row: Mapping[str, Any]) -> Row:
     revision = row.get("revision")
     return {"status": "provisional" if revision else "open", "revision": revision}
-
-
-def _time(instant: int) -> str:
-    return from_microseconds(instant).isoformat().replace("+00:00", "Z")
 
 
 def _known(value: float) -> float | None:
@@ -389,19 +273,12 @@ def _celsius(kelvin: float | None) -> float | None:
     return None if kelvin is None else round(kelvin - 273.15, 9)
 
 
-def _facts(note: str) -> str:
-    return "; ".join(str(fact.get("fact")) for fact in json.loads(note).get("facts", []))
-
-
-def heading(what: str, opened: OpenSite, rows: Sequence[Mapping[str, Any]]) -> str:
-    """Return the title of a table: what the figures in it stand at."""
-    site = opened.site
+def remarks(what: str, rows: Sequence[Mapping[str, Any]]) -> str:
+    """Return what the figures of a table stand at, in one sentence or two."""
     if what == "totals" and rows:
         bases = sorted({(row["base_pressure_kPa"], row["base_temperature_degC"]) for row in rows})
-        at = " or ".join(f"{p:g} kPa, {t:g} degC" for p, t in bases)
-        return f"{site.name}: corrected totals, base volume at {at}; {NO_UNCERTAINTY}"
+        at = " or ".join(f"{p:g} kPa and {t:g} degC" for p, t in bases)
+        return f"Base volume at {at}; measured time only, never scaled up; {NO_UNCERTAINTY}."
     if what == "balances" and rows:
-        return (
-            f"{site.name}: in = out + vented + imbalance; {NO_UNCERTAINTY}, storage not configured"
-        )
-    return f"{site.name}: {what}"
+        return f"in = out + vented + imbalance; storage is not configured; {NO_UNCERTAINTY}."
+    return ""

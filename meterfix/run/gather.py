@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import Any
 
 from meterfix.frames import ParsedFile
@@ -29,8 +29,7 @@ from meterfix.store.ledger import Ledger
 SLICE_BYTES = 96 * 1024 * 1024
 """A pass takes files up to about this size in all (a packed one counts eightfold)."""
 SLICE_FILES = 4_000
-CRASHES_BEFORE_ALONE = 2
-CRASHES_BEFORE_QUARANTINE = 3
+CRASHES_BEFORE_TRIAL = 2
 PACKED_FACTOR = 8
 REFUSED = "refused: "
 """How the reason of a file begins that is never read as it is: a link, a pipe, too large."""
@@ -133,14 +132,15 @@ class Known:
 def take_slice(opened: OpenSite, known: Known, arrival: int) -> Slice:
     """Return the next files to take in, a bounded amount, in a fixed order.
 
-    Files that crashed a pass twice are taken alone; one that crashed it then too is
-    quarantined: recorded with its bytes, and not parsed.
+    What the archive holds and the database does not know comes first and by itself: only once
+    it is committed can be said which version of its name, or which end of it, a file brings.
     """
     taken = Slice()
     adopted = _adopted(opened.ledger, known)
-    names = {(a.source, a.binding, a.raw_sha256) for a in adopted}
-    taken.arrived.extend(adopted)
-    size = sum(len(a.raw) for a in adopted)
+    if adopted:
+        return Slice(arrived=adopted, more=True)
+    names: set[tuple[str, str, str]] = set()
+    size = 0
     for source in opened.site.sources:
         looked = look(source, opened.folder / source.folder, opened.ledger.archive.folder)
         if looked.trouble:
@@ -171,7 +171,24 @@ def take_slice(opened: OpenSite, known: Known, arrival: int) -> Slice:
                 size += packed * len(outcome.raw)
             if source.delivery is Delivery.WHOLE or outcome is None:
                 taken.seen.append(_seen_row(name, stamp))
-    return _suspects_alone(taken, known)
+    return taken
+
+
+def suspects(taken: Slice, known: Known) -> list[int]:
+    """Return the places in the slice of files that were in hand when passes died, twice or more.
+
+    They are tried alone before they go on.
+    """
+    return [
+        number
+        for number, file in enumerate(taken.arrived)
+        if known.attempts.get(attempt_key(file), 0) >= CRASHES_BEFORE_TRIAL
+    ]
+
+
+def attempt_key(file: Arrived) -> tuple[str, str, str, str]:
+    """Return the key under which attempts at a file are counted."""
+    return (file.source, file.binding, file.name, file.raw_sha256)
 
 
 def parse_arrived(
@@ -308,7 +325,6 @@ def _take(
         modified=found.modified_us,
         file_sha256=digest,
         file_length=len(content),
-        quarantined=_quarantined(known, (*name, digest)),
     )
 
 
@@ -357,27 +373,6 @@ def _appended(
         file_length=consumed,
         carried=carried,
     )
-
-
-def _quarantined(known: Known, key: tuple[str, str, str, str]) -> str:
-    crashes = known.attempts.get(key, 0)
-    if crashes < CRASHES_BEFORE_QUARANTINE:
-        return ""
-    return f"taking this file in crashed {crashes} times, the last time alone; it is not read"
-
-
-def _suspects_alone(taken: Slice, known: Known) -> Slice:
-    """Keep only one file if some crashed a pass before; quarantined ones do no harm."""
-    suspects = [
-        file
-        for file in taken.arrived
-        if not file.quarantined
-        and known.attempts.get((file.source, file.binding, file.name, file.raw_sha256), 0)
-        >= CRASHES_BEFORE_ALONE
-    ]
-    if not suspects or len(taken.arrived) == 1:
-        return taken
-    return replace(taken, arrived=suspects[:1], seen=[], more=True)
 
 
 def _adopted(ledger: Ledger, known: Known) -> list[Arrived]:

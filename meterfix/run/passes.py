@@ -5,13 +5,14 @@ from __future__ import annotations
 import json
 import uuid
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import date
 from typing import Any
 
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.frames import CALCULATION_VERSION
 from meterfix.run import alerts, clock
+from meterfix.run.balances import Balances
 from meterfix.run.book import Book
 from meterfix.run.compute import Key, Report, compute
 from meterfix.run.conflicts import conflict_rows
@@ -20,7 +21,9 @@ from meterfix.run.gather import (
     Arrived,
     Known,
     Slice,
+    attempt_key,
     parse_arrived,
+    suspects,
     take_slice,
 )
 from meterfix.run.judge import Judged, Verdicts, judge
@@ -29,6 +32,7 @@ from meterfix.run.periods import filled, in_service, touched
 from meterfix.run.pool import Pool, ranks_as_of
 from meterfix.run.rejudge import Again, to_judge_again
 from meterfix.run.settle import Settled, Settling
+from meterfix.run.trial import faults
 from meterfix.store.fingerprint import fingerprint
 from meterfix.store.ledger import Ledger, PassRecord
 
@@ -62,6 +66,10 @@ class PassWork:
     gases: GasLibrary
     report: Report | None = None
     known: Known = field(init=False)
+    in_hand: bool = False
+    """Files are being read and figures computed; what fails now may be one of theirs."""
+    tried: bool = False
+    """Files were tried alone, and those in hand passed: what fails now is not theirs."""
     storing: bool = False
     """The files have been read and their figures computed; what fails now is not theirs."""
 
@@ -76,6 +84,7 @@ class PassWork:
         last_now = max((row["now_us"] for row in passes), default=0)
         arrival = self.now
         taken = take_slice(self.opened, self.known, arrival)
+        taken = self._try_suspects(taken)
         again, more_again = to_judge_again(self.opened)
         self._begin_attempt(taken.arrived)
         more = taken.more or more_again
@@ -163,25 +172,48 @@ class PassWork:
         rows["raw_object"] = list(raw_rows.values())
         return rows, verdicts, pool, last
 
+    def _try_suspects(self, taken: Slice) -> Slice:
+        """Try alone what was in hand when passes died; mark what fails as quarantined."""
+        places = suspects(taken, self.known)
+        if not places:
+            return taken
+        self.tried = True
+        found = faults(
+            self.opened.path, [taken.arrived[place] for place in places], self.now, rehearse
+        )
+        arrived = list(taken.arrived)
+        for number, fault in found.items():
+            file = arrived[places[number]]
+            crashes = self.known.attempts[attempt_key(file)]
+            reason = f"passes died {crashes} times with this file in hand; tried alone, {fault}"
+            arrived[places[number]] = replace(file, quarantined=reason)
+        return replace(taken, arrived=arrived)
+
     def _begin_attempt(self, arrived: Sequence[Arrived]) -> None:
         """Remember, outside the pass's transaction, which files it is about to take in."""
+        cleared = set(suspects(Slice(list(arrived)), self.known)) if self.tried else set()
         rows = [
             {
                 "source": file.source,
                 "binding": file.binding,
                 "name": file.name,
                 "raw_sha256": file.raw_sha256,
-                "crashes": self.known.attempts.get(_attempt_key(file), 0) + 1,
-                "alone": len(arrived) == 1,
+                "crashes": 1
+                if number in cleared
+                else self.known.attempts.get(attempt_key(file), 0) + 1,
+                "alone": number in cleared,
             }
-            for file in arrived
+            for number, file in enumerate(arrived)
             if not file.quarantined
         ]
         if rows:
+            self.in_hand = True
             self.opened.ledger.write_outside(replace={"attempt": rows})
 
     def forgive(self) -> None:
         """Take the marks back off the files of a pass that failed for no fault of theirs."""
+        if not self.in_hand:
+            return
         marks = [
             {**dict(zip(_ATTEMPT, key, strict=True)), "crashes": crashes, "alone": 0}
             for key, crashes in self.known.attempts.items()
@@ -189,6 +221,23 @@ class PassWork:
         stored = self.opened.ledger.rows("attempt", columns=_ATTEMPT)
         gone = [row for row in stored if tuple(row.values()) not in self.known.attempts]
         self.opened.ledger.write_outside(replace={"attempt": marks}, remove={"attempt": gone})
+
+    def rehearse(self, file: Arrived) -> None:
+        """Do all of a pass for one file alone, but commit nothing."""
+        self.known = Known.of(self.opened.ledger)
+        _, verdicts, pool, ranked = self._take_in(Slice([file]), ())
+        book = Book(self.opened.ledger)
+        wanted, forced = self._dirty(verdicts, book, site_changed=False)
+        self._figures(
+            wanted,
+            forced,
+            pool,
+            book,
+            may_close=False,
+            waiting=0,
+            site_changed=False,
+            last_delivery=ranked,
+        )
 
     # --- figures -----------------------------------------------------------------------------
 
@@ -251,7 +300,9 @@ class PassWork:
             close_reason=f"the deadline has passed{held}",
             revision_reason="the site file changed" if site_changed else "later readings",
         )
-        return settling.settle(computed)
+        settled = settling.settle(computed)
+        Balances(settling, settled).settle(everything=site_changed)
+        return settled
 
     # --- committing --------------------------------------------------------------------------
 
@@ -288,7 +339,7 @@ class PassWork:
         replace["heartbeat"] = [heartbeat(self.now, "")]
         remove = dict(settled.remove)
         remove["attempt"] = [
-            dict(zip(_ATTEMPT, _attempt_key(f), strict=True)) for f in taken.arrived
+            {"source": f.source, "binding": f.binding, "name": f.name} for f in taken.arrived
         ]
         pass_id = str(uuid.uuid4())
         rows["pass"] = [
@@ -399,6 +450,11 @@ class PassWork:
         return ""
 
 
+def rehearse(opened: OpenSite, file: Arrived, now: int, gases: GasLibrary) -> None:
+    """Do all of a pass for one file alone, but commit nothing; for `trial.faults`."""
+    PassWork(opened, now, now, gases).rehearse(file)
+
+
 def heartbeat(now: int, error: str) -> Row:
     """Return the heartbeat's row."""
     return {"id": 1, "last_us": now, "last_error": error}
@@ -427,10 +483,6 @@ def _delivery_row(file: Arrived, sequence: int, replaces: int, after: Mapping[st
         "modified_us": file.modified,
         "replaces": replaces,
     }
-
-
-def _attempt_key(file: Arrived) -> tuple[str, str, str, str]:
-    return (file.source, file.binding, file.name, file.raw_sha256)
 
 
 def _waiting_key(row: Mapping[str, Any]) -> tuple[str, str, str]:

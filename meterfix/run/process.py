@@ -11,6 +11,8 @@ from meterfix.run import clock
 from meterfix.run.compute import Report
 from meterfix.run.opening import OpenSite
 from meterfix.run.passes import Outcome, PassWork, heartbeat
+from meterfix.run.rebuild import missing_segments, rebuild_segment
+from meterfix.store.ledger import DamagedReadings
 
 
 @dataclass
@@ -43,9 +45,10 @@ def process(
 ) -> Processed:
     """Run passes until nothing is new.
 
-    A pass that fails while it takes files in leaves a mark beside them; after two failures
-    each of them is taken in alone, and one that fails alone is quarantined. So one file cannot
-    keep the rest out.
+    A pass that fails or dies while it takes files in leaves a mark beside them; after two such
+    marks each of them is tried alone in another process, and one that fails there is
+    quarantined. So one file cannot keep the rest out, and a machine that loses power, a process
+    that is killed or a full disk cannot set a good file apart.
 
     Parameters
     ----------
@@ -64,22 +67,33 @@ def process(
     done = Processed()
     gases = GasLibrary()
     ledger = opened.ledger
+    rebuilt: set[int] = set()
     with ledger.writer():
+        for sequence in missing_segments(ledger):
+            rebuild_segment(opened, sequence)
         more = True
         while more:
             instant = clock.now() if now is None else now
             work = PassWork(opened, instant, clock.now(), gases, report)
             try:
                 outcome = work.run()
+            except DamagedReadings as damaged:
+                work.forgive()
+                if damaged.pass_sequence in rebuilt:
+                    raise
+                rebuild_segment(opened, damaged.pass_sequence)
+                rebuilt.add(damaged.pass_sequence)
+                continue
             except MeterfixError:
+                work.forgive()
                 raise
             except Exception as error:
                 # whatever a file's bytes can do to the code that reads them ends here, once
-                # per attempt: the marks beside the files make the next pass a narrower one
+                # per attempt: after two marks beside the files the next pass tries them alone
                 if work.storing:
                     work.forgive()
                     raise
-                if not ledger.rows("attempt", columns=("name",)):
+                if work.tried or not work.in_hand:
                     raise
                 sentence = f"a pass failed: {type(error).__name__}: {error}"
                 done.crashes.append(sentence)

@@ -16,6 +16,9 @@ from meterfix.calc.gas.properties import GasLibrary
 from meterfix.calc.totals import day_total, hourly_records
 from meterfix.frames import CALCULATION_VERSION, HOURLY_COLUMNS, HourlyRecord, ParsedFile
 from meterfix.intake.site import site_from_text
+from meterfix.run.balances import day_row as balance_day_row
+from meterfix.run.balances import month_row as balance_month_row
+from meterfix.run.balances import same_balance
 from meterfix.run.days import input_digest, meter_day
 from meterfix.run.figures import (
     FIGURES,
@@ -30,11 +33,10 @@ from meterfix.run.judge import Judged, problems_of, readings_digest, readings_of
 from meterfix.run.opening import OpenSite
 from meterfix.run.pool import Pool, ranks_as_of
 from meterfix.run.rejudge import read_raw, state_before
-from meterfix.run.settle import balance_row, same_balance
 from meterfix.run.signals import SiteIndex
 from meterfix.store.fingerprint import fingerprint
 from meterfix.store.proof import Finding, check_store
-from meterfix.store.readings import encode_segment
+from meterfix.store.readings import DamagedReadings, encode_segment
 
 Report = Callable[[str, int, int], None]
 TOLERANCE = 1e-12
@@ -74,7 +76,13 @@ def verify(opened: OpenSite, report: Report | None = None) -> Proof:
         return proof
     sites = _sites(opened)
     _replay_files(opened, sites, proof, tell)
-    _Figures(opened, sites, proof, tell).replay()
+    try:
+        _Figures(opened, sites, proof, tell).replay()
+    except DamagedReadings as damaged:
+        # found by the check of the store already, unless it happened since
+        if not any(finding.check == "readings" for finding in proof.findings):
+            where = f"readings of pass {damaged.pass_sequence}"
+            proof.findings.append(Finding("readings", where, str(damaged)))
     return proof
 
 
@@ -345,40 +353,59 @@ class _Figures:
 
     def _balances(self, hours: Mapping[tuple[str, str, int], Row]) -> None:
         ledger = self.opened.ledger
-        for row in (*ledger.rows("balance_revision"), *ledger.rows("open_balance")):
+        stored = [*ledger.rows("balance_revision"), *ledger.rows("open_balance")]
+        days = {
+            (row["envelope"], row["quantity"], row["gas_day"], row.get("revision", 0)): row
+            for row in stored
+            if row["kind"] == "gas_day"
+        }
+        for row in stored:
             if row["calculation_version"] != CALCULATION_VERSION:
                 self.proof.not_replayable += 1
                 continue
-            index = self.sites[row["site_digest"]]
-            envelope = next(e for e in index.site.envelopes if e.name == row["envelope"])
-            day = date.fromisoformat(row["gas_day"])
-            start, end = index.site.calendar.start(day), index.site.calendar.end(day)
-            where = (
-                f"envelope {row['envelope']}, {row['quantity']}, gas day {row['gas_day']}, "
-                f"{_named(row.get('revision', 0))}"
-            )
-            records: dict[str, HourlyRecord | None] = {}
-            lacking = ""
-            for meter, revision in json.loads(row["links"]):
-                if revision is None:
-                    records[meter] = None
-                    continue
-                stored = hours.get((meter, row["gas_day"], revision))
-                if stored is None:
-                    lacking = f"{meter}, {_named(revision)}"
-                    break
-                records[meter] = hourly_from(stored)
             self.proof.balances += 1
-            if lacking:
-                self._differs("links", where, lacking, "not stored")
-                continue
-            balance = day_balance(
-                envelope, row["quantity"], records, envelope.tolerance.in_force(start)
+            where = (
+                f"envelope {row['envelope']}, {row['quantity']}, {row['kind'].replace('_', ' ')} "
+                f"{row['gas_day']}, {_named(row.get('revision', 0))}"
             )
-            again = balance_row(balance, start, end, day)
+            try:
+                again = (
+                    self._day_balance(row, hours)
+                    if row["kind"] == "gas_day"
+                    else self._month_balance(row, days)
+                )
+            except KeyError as error:
+                self._differs("links", where, str(error), "not stored")
+                continue
             if not same_balance(row, again):
-                name = next(n for n in again if row[n] != again[n])
+                name = next(n for n in again if n != "links" and row[n] != again[n])
                 self._differs(name, where, row[name], again[name])
+
+    def _day_balance(self, row: Row, hours: Mapping[tuple[str, str, int], Row]) -> Row:
+        index = self.sites[row["site_digest"]]
+        envelope = next(e for e in index.site.envelopes if e.name == row["envelope"])
+        day = date.fromisoformat(row["gas_day"])
+        start, end = index.site.calendar.start(day), index.site.calendar.end(day)
+        records: dict[str, HourlyRecord | None] = {
+            meter: None if revision is None else hourly_from(hours[meter, row["gas_day"], revision])
+            for meter, revision in json.loads(row["links"])
+        }
+        balance = day_balance(
+            envelope, row["quantity"], records, envelope.tolerance.in_force(start)
+        )
+        return balance_day_row(balance, start, end, day)
+
+    def _month_balance(self, row: Row, days: Mapping[tuple[str, str, str, int], Row]) -> Row:
+        return balance_month_row(
+            self.sites[row["site_digest"]].site.calendar,
+            row["envelope"],
+            row["quantity"],
+            date.fromisoformat(row["gas_day"]),
+            [
+                days[row["envelope"], row["quantity"], day, revision]
+                for day, revision in json.loads(row["links"])
+            ],
+        )
 
     def _differs(self, what: str, where: str, stored: object, again: object) -> None:
         self.proof.findings.append(

@@ -2,14 +2,11 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from datetime import date
 from typing import Any
 
-from meterfix.calc.balance.envelopes import DayBalance, day_balance
-from meterfix.model.site import Envelope
 from meterfix.run.book import Book, Standing
 from meterfix.run.compute import Computed, Key
 from meterfix.run.figures import (
@@ -71,7 +68,6 @@ class Settling:
         out = Settled()
         self._days(computed, out)
         self._months(out)
-        self._balances(out)
         return out
 
     def _days(self, computed: Mapping[Key, Computed], out: Settled) -> None:
@@ -171,128 +167,6 @@ class Settling:
                 continue
             self._store_total(row, revision, out)
 
-    def _balances(self, out: Settled) -> None:
-        envelopes = self.index.site.envelopes
-        wanted: set[tuple[str, date]] = {
-            (envelope.name, day)
-            for envelope in envelopes
-            for meter, day in out.changed_days
-            if meter in {*envelope.inflow, *envelope.outflow, *envelope.vented}
-        }
-        open_rows = self.ledger.rows("open_balance")
-        wanted |= {
-            (row["envelope"], date.fromisoformat(row["gas_day"]))
-            for row in open_rows
-            if self.closes(row["period_end_us"])
-        }
-        if not wanted:
-            return
-        days = sorted({day for _, day in wanted})
-        self.book.load(days)
-        self.book.load_records(days)
-        standing: dict[tuple[str, str, str], tuple[Row, int]] = {
-            _balance_key(row): (row, 0) for row in open_rows
-        }
-        for row in self.ledger.latest(
-            "balance_revision",
-            group=("envelope", "kind", "period_start_us", "quantity"),
-            number="revision",
-            where={"gas_day": [day.isoformat() for day in days]},
-        ):
-            standing[_balance_key(row)] = (row, row["revision"])
-        by_name = {envelope.name: envelope for envelope in envelopes}
-        for name, day in sorted(wanted):
-            if name not in by_name:
-                continue
-            for quantity in by_name[name].quantities:
-                row = self._balance_row(by_name[name], quantity, day)
-                before, revision = standing.get((name, day.isoformat(), quantity), (None, 0))
-                if before is not None and revision and same_balance(before, row):
-                    continue
-                self._store_balance(row, revision, out)
-
-    def _balance_row(self, envelope: Envelope, quantity: str, day: date) -> Row:
-        meters = (*envelope.inflow, *envelope.outflow, *envelope.vented)
-        start = self.index.site.calendar.start(day)
-        balance = day_balance(
-            envelope,
-            quantity,
-            {meter: self.book.record(meter, day) for meter in meters},
-            envelope.tolerance.in_force(start),
-        )
-        links = [
-            [meter, standing.revision if (standing := self.book.days.get((meter, day))) else None]
-            for meter in meters
-        ]
-        return {
-            **balance_row(balance, start, self.index.site.calendar.end(day), day),
-            "links": json.dumps(links),
-        }
-
-    def _store_balance(self, row: Row, revision: int, out: Settled) -> None:
-        key = {name: row[name] for name in ("envelope", "kind", "period_start_us", "quantity")}
-        if not revision and not self.closes(row["period_end_us"]):
-            out.put("open_balance", {**row, **_without_delivery(self.versions)})
-            return
-        out.add(
-            "balance_revision",
-            {
-                **row,
-                **_without_delivery(self.versions),
-                "basis": BASIS,
-                "revision": revision + 1,
-                "revision_reason": self.revision_reason if revision else self.close_reason,
-            },
-        )
-        if not revision:
-            out.drop("open_balance", key)
-
-
-def balance_row(balance: DayBalance, start: int, end: int, day: date) -> Row:
-    """Return an envelope's balance of a gas day as a row, without its status and links."""
-    reasons = {
-        "input": balance.reason,
-        "significant": balance.significant.reason,
-        "beyond_tolerance": balance.beyond_tolerance.reason,
-        "storage_change": balance.storage_reason,
-        "hours": balance.hourly_verdict.reason,
-        "input_by_hour": list(balance.hourly_reasons) if any(balance.hourly_reasons) else [],
-    }
-    return {
-        "envelope": balance.envelope,
-        "kind": "gas_day",
-        "period_start_us": start,
-        "period_end_us": end,
-        "gas_day": day.isoformat(),
-        "quantity": balance.quantity,
-        "inflow": balance.inflow,
-        "outflow": balance.outflow,
-        "vented": balance.vented,
-        "storage_change": balance.storage_change,
-        "imbalance": balance.imbalance,
-        "tolerance": balance.tolerance,
-        "beyond_tolerance": balance.beyond_tolerance.answer.value,
-        "significant": balance.significant.answer.value,
-        "measured_fraction": balance.measured_fraction,
-        "reason": json.dumps({k: v for k, v in reasons.items() if v}, sort_keys=True),
-        "hourly": encode_array(balance.hourly),
-    }
-
-
-def same_balance(one: Mapping[str, Any], other: Mapping[str, Any]) -> bool:
-    """Return whether two balance rows say the same, bit for bit."""
-    ignored = {"links"}
-    names = [name for name in other if name not in ignored]
-    return all(one[name] == other[name] for name in names)
-
-
-def _balance_key(row: Mapping[str, Any]) -> tuple[str, str, str]:
-    return (row["envelope"], row["gas_day"], row["quantity"])
-
-
-def _without_delivery(versions: Row) -> Row:
-    return {k: v for k, v in versions.items() if k != "as_of_delivery"}
-
 
 def _plain(row: Mapping[str, Any]) -> Row:
     """Return an open row without the columns that say by what it was computed."""
@@ -302,6 +176,7 @@ def _plain(row: Mapping[str, Any]) -> Row:
         "site_digest",
         "calculation_version",
         "fingerprint",
+        "pass_sequence",
     }
     return {k: v for k, v in row.items() if k not in versions}
 

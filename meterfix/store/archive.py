@@ -9,13 +9,12 @@ crash before COMMIT, or put back from an older copy) can take it up. Raw bytes a
 
 from __future__ import annotations
 
-import contextlib
 import hashlib
 import json
 import os
 import struct
 import zlib
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -324,22 +323,15 @@ class Archive:
         self.packs_folder.mkdir(parents=True, exist_ok=True)
         self.readings_folder.mkdir(parents=True, exist_ok=True)
 
-    def sweep(self, segments: Iterable[str]) -> None:
-        """Remove unfinished files, and readings that the database does not name.
+    def sweep(self) -> None:
+        """Remove files that a killed process left unfinished; only under the writer's lock.
 
-        Only under the writer's lock. Packs are never removed.
+        Finished files stay: packs always, and readings that this database does not name because
+        another copy of it may.
         """
-        for path in self._unfinished():
-            path.unlink(missing_ok=True)
-        wanted = set(segments)
-        for path in self.readings_folder.glob("*.readings"):
-            if path.name not in wanted:
-                path.unlink(missing_ok=True)
-
-    def _unfinished(self) -> Iterator[Path]:
         for folder in (self.folder, self.packs_folder, self.readings_folder):
-            with contextlib.suppress(FileNotFoundError):
-                yield from folder.glob(f".*{UNFINISHED}")
+            for path in folder.glob(f".*{UNFINISHED}"):
+                path.unlink(missing_ok=True)
 
 
 def _packed(content: bytes) -> tuple[str, bytes]:

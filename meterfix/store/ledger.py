@@ -167,9 +167,9 @@ class Ledger:
     def recover(self) -> list[dict[str, Any]]:
         """Compare the anchor with the database and return facts that the next pass must chain.
 
-        Unfinished files and readings that the database does not name are removed. The anchor is
-        not written here: `commit` writes what settles the facts, together with the pass that
-        chains them, so that a process killed at any moment leaves them to be found again.
+        Unfinished files are removed. The anchor is not written here: `commit` writes what settles
+        the facts, together with the pass that chains them, so that a process killed at any moment
+        leaves them to be found again.
 
         Returns
         -------
@@ -184,10 +184,8 @@ class Ledger:
         LedgerError
             If the difference has another cause; nothing is written then.
         """
-        connection = self._connection()
-        with connection.begin():
-            segments = [str(r["file"]) for r in query.select_rows(connection, "reading_segment")]
-        self.archive.sweep(segments)
+        self._connection()
+        self.archive.sweep()
         return [dict(fact) for fact in self._compare().facts]
 
     def _compare(self) -> Recovery:

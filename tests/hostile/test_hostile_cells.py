@@ -235,6 +235,14 @@ CASES = [
         "fast": True,
     },
     {
+        "number": 25,
+        "what": "a number that stands for a bad value, nothing else on its line is bad",
+        "content": HEAD + GOOD + b"2026-10-01T00:01:00Z,1,-9999,1\n",
+        "used": {"dp": [2, 3], "p": [2], "t": [2, 3]},
+        "problems": ((3, "p", "no reading"),),
+        "fast": True,
+    },
+    {
         "number": 26,
         "what": "columns named NA and 007 are taken by their names",
         "content": b"time,dp,p,NA,007\n2026-10-01T00:00:00Z,1,1,7,7\n",

@@ -182,6 +182,21 @@ CASES = [
         "fast": True,
     },
     {
+        "number": 20,
+        "what": "a header without the time in the middle",
+        "content": HEAD + GOOD + b"clock,dp,p,t\n" + NEXT,
+        "rejected": "line 3: time column 'time' missing",
+    },
+    {
+        "number": 19,
+        "what": "an unknown column is told once, under whatever header",
+        "content": b"time,dp,p,x\n" + GOOD + b"time,x,p,dp\n" + NEXT,
+        "used": {"dp": [2, 4], "p": [2, 4]},
+        "problems": ((1, "x", "neither declared nor ignored"),),
+        "warning": "'x'",
+        "skipped": 2,
+    },
+    {
         "number": 21,
         "what": "another unit in the header",
         "content": b"time,dp [kPa],p,t\n" + GOOD,

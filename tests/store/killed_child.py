@@ -25,7 +25,7 @@ def die() -> None:
 
 
 def path_of(descriptor: int) -> str:
-    return os.readlink(f"/proc/self/fd/{descriptor}")
+    return str(Path(f"/proc/self/fd/{descriptor}").readlink())
 
 
 def kill_at_fsync(when):

@@ -1,7 +1,6 @@
 from __future__ import annotations
 
 import os
-import random
 import shutil
 import signal
 import subprocess
@@ -9,6 +8,7 @@ import sys
 import time
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from meterfix.store import proof
@@ -126,8 +126,7 @@ def test_killed_once(moment, tmp_path, scenario, killed, undisturbed):
     ],
 )
 def test_killed_again_while_recovering(first, again, tmp_path, scenario, killed, undisturbed):
-    """A start-up that is itself killed while it records a killed pass leaves all of it to the
-    next one."""
+    """A start-up killed while it records a killed pass leaves all of it to the next one."""
     killed(tmp_path, first)
     kill_at(tmp_path, again, 1, 2, 3)
     assert_whole(tmp_path, scenario, undisturbed)
@@ -150,7 +149,7 @@ def test_killed_at_random_moments(tmp_path, scenario, undisturbed):
     """A service killed at random moments, again and again, ends where an undisturbed one does."""
     with scenario.open_ledger(tmp_path) as ledger:
         scenario.run(ledger, scenario.arrivals(1), 1000)
-    chance = random.Random(20260301)
+    chance = np.random.default_rng(20260301)
     for _ in range(4):
         child = start(tmp_path, "never", 1, 2, 3)
         time.sleep(chance.uniform(0.25, 0.8))

@@ -19,7 +19,7 @@ def _nobody_else_commits(monkeypatch):
 
 @pytest.fixture
 def folder(tmp_path, scenario):
-    """A ledger of three passes, closed."""
+    """Make a ledger of three passes, closed."""
     with scenario.open_ledger(tmp_path) as ledger:
         for last in (2, 3, 4):
             scenario.run(ledger, scenario.arrivals(*range(1, last + 1)), last * 1000)
@@ -151,9 +151,11 @@ def test_two_totals_swapped(folder, scenario):
     """Two valid totals that have changed places are both named."""
     tamper(
         folder,
-        "UPDATE total_revision SET period_start_us = -1 WHERE gas_day = '2026-03-01'",
-        "UPDATE total_revision SET period_start_us = 86400000000 WHERE gas_day = '2026-03-02'",
-        "UPDATE total_revision SET period_start_us = 172800000000 WHERE period_start_us = -1",
+        "UPDATE total_revision SET period_start_us = 1 WHERE gas_day = '2026-03-01'",
+        "UPDATE total_revision SET period_start_us = 86400000000, period_end_us = 172800000000 "
+        "WHERE gas_day = '2026-03-02'",
+        "UPDATE total_revision SET period_start_us = 172800000000, period_end_us = 259200000000 "
+        "WHERE period_start_us = 1",
     )
     (first,) = findings_of(folder, scenario)
     assert (first.check, first.where) == ("rows", "total_revision of pass 1")
@@ -209,8 +211,8 @@ def test_a_trigger_is_gone_or_another(folder, scenario):
         )
     database.close()
     assert [finding.where for finding in findings_of(folder, scenario)] == [
-        "trigger audit_refuses_update",
         "trigger fate_refuses_delete",
+        "trigger audit_refuses_update",
     ]
 
 

@@ -53,7 +53,8 @@ class DetailTables:
     """E_ij, U_ij, K_ij, G_ij of the pairs that differ from 1."""
 
 
-def _rows(name: str) -> list[dict[str, str]]:
+def coefficient_rows(name: str) -> list[dict[str, str]]:
+    """Return the rows of a packaged table, its comment lines left out."""
     folder = resources.files("meterfix.calc.gas") / "coefficients"
     text = (folder / f"{name}.csv").read_text(encoding="utf-8")
     lines = [line for line in text.splitlines() if not line.startswith("#")]
@@ -68,7 +69,7 @@ def detail_tables() -> DetailTables:
     ----------
     .. [1] AGA Report No. 8 Part 1:2017, DETAIL; ISO 20765-1:2005.
     """
-    ideal = {row["component"]: row for row in _rows("aga8_detail_ideal")}
+    ideal = {row["component"]: row for row in coefficient_rows("aga8_detail_ideal")}
     components = tuple(
         DetailComponent(
             name=row["component"],
@@ -94,7 +95,7 @@ def detail_tables() -> DetailTables:
                 float(ideal[row["component"]]["th0_7"]),
             ),
         )
-        for row in _rows("aga8_detail_pure")
+        for row in coefficient_rows("aga8_detail_pure")
     )
     terms = tuple(
         DetailTerm(
@@ -105,7 +106,7 @@ def detail_tables() -> DetailTables:
             half_temperature_exponent=round(2.0 * float(row["u"])),
             flags=(int(row["g"]), int(row["q"]), int(row["f"]), int(row["s"]), int(row["w"])),
         )
-        for row in _rows("aga8_detail_terms")
+        for row in coefficient_rows("aga8_detail_terms")
     )
     pairs = {
         (row["component_i"], row["component_j"]): (
@@ -114,6 +115,6 @@ def detail_tables() -> DetailTables:
             float(row["K_ij"]),
             float(row["G_ij"]),
         )
-        for row in _rows("aga8_detail_binary")
+        for row in coefficient_rows("aga8_detail_binary")
     }
     return DetailTables(components=components, terms=terms, pairs=pairs)

@@ -1,15 +1,16 @@
-"""Amount density from pressure and temperature by AGA8 DETAIL: the gas root, or the dense one.
+"""Amount density from pressure and temperature by a mixture equation: the gas root, or the dense one.
 
 What is detected as 'no gas', exactly:
 
-1. Walking up from zero density in steps of at most 0.05 in reduced density, the isotherm stops
+1. Walking up from zero density in steps of at most 0.05 in reduced density (wider ones are
+   taken only above the temperature of condition 2, where there is nothing to miss), the isotherm stops
    rising, (dp/dD)_T <= 0 or less pressure after a step, before it reaches the pressure: there
    is no gas root.
 2. Below the mixture's mechanical critical temperature (the highest at which an isotherm of this
    composition stops rising anywhere) a gas root exists, and a second, denser stable root too,
    whose Gibbs energy at the same pressure, temperature and composition is the lower one: the
    gas root is not unique and only metastable. For a pure component this is its saturation
-   curve by AGA8 DETAIL itself.
+   curve by the equation itself.
 3. No root up to a reduced density of 4, or no convergence.
 
 For a mixture condition 2 lies inside the two-phase region: between the dew point and this
@@ -23,14 +24,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from meterfix.calc.elementary import logarithm
-from meterfix.calc.gas.detail import (
-    GAS_CONSTANT,
-    DetailMixture,
-    TemperatureSums,
-    pressure_terms,
-    residual_helmholtz_energy,
-    temperature_sums,
-)
+from meterfix.calc.gas.helmholtz import Isotherms, Mixture
 from meterfix.frames import Floats, Truths
 
 _STEP = 0.05
@@ -51,17 +45,17 @@ class DensityRoots:
 
 
 def _walk(
-    mixture: DetailMixture, sums: TemperatureSums, target: Floats, *, upward: bool
+    mixture: Mixture, isotherms: Isotherms, target: Floats, steps: Floats, *, upward: bool
 ) -> DensityRoots:
     """Follow each isotherm from zero (or from the highest) density to the target.
 
-    The target is p/(R T) [kmol/m3]. Each record walks by Newton steps, limited to `_STEP`,
-    until it has the root between two densities; then by Newton steps that fall back to
+    The target is p/(R T) [kmol/m3]. Each record walks by Newton steps, limited to its largest
+    step in reduced density, until it has the root between two densities; then by Newton steps that fall back to
     halving. A record that has converged, or has met a falling isotherm first, is frozen.
     """
     n = len(target)
     density = np.full(n, np.nan)
-    largest = _STEP / mixture.size_cubed
+    largest = steps / mixture.size_cubed
     highest = _HIGHEST / mixture.size_cubed
     # state of the active records; all of it is compressed together as records freeze
     active = np.arange(n)
@@ -70,7 +64,7 @@ def _walk(
     bracketed = np.zeros(n, dtype=np.bool_)
     before = np.full(n, -np.inf if upward else np.inf)
     for _ in range(_ITERATIONS):
-        Z, slope = pressure_terms(mixture, sums, D)
+        Z, slope = isotherms.pressure_terms(D)
         excess = D * Z - target
         below = excess < 0.0
         lower = np.where(below, D, lower)
@@ -101,12 +95,12 @@ def _walk(
                 break
             active, D, target = active[going], D[going], target[going]
             lower, upper, bracketed = lower[going], upper[going], bracketed[going]
-            before = before[going]
-            sums = sums.part(going)
+            before, largest = before[going], largest[going]
+            isotherms = isotherms.part(going)
     return DensityRoots(density, ~np.isnan(density))
 
 
-def mechanical_critical_temperature(mixture: DetailMixture) -> float:
+def mechanical_critical_temperature(mixture: Mixture) -> float:
     """Return a temperature above which every isotherm of the mixture rises all the way [K].
 
     Found by scanning reduced densities up to 3 over temperatures in steps of 1 %, from above;
@@ -116,22 +110,21 @@ def mechanical_critical_temperature(mixture: DetailMixture) -> float:
     temperature = 3.0 * mixture.temperature_scale
     while temperature > 0.4 * mixture.temperature_scale:
         T = np.full(len(reduced), temperature)
-        sums = temperature_sums(mixture, T, orders=1)
-        _, slope = pressure_terms(mixture, sums, reduced / mixture.size_cubed)
+        _, slope = mixture.isotherms(T).pressure_terms(reduced / mixture.size_cubed)
         if not (slope > 0.0).all():
             return temperature * 1.01
         temperature /= 1.01
     return 0.0
 
 
-def _gibbs_energy(mixture: DetailMixture, sums: TemperatureSums, density: Floats) -> Floats:
+def _gibbs_energy(isotherms: Isotherms, density: Floats) -> Floats:
     """Return the residual Gibbs energy over R T at equal pressure, temperature, composition."""
-    Z, _ = pressure_terms(mixture, sums, density)
-    return residual_helmholtz_energy(mixture, sums, density) + Z - logarithm(Z)
+    Z, _ = isotherms.pressure_terms(density)
+    return isotherms.residual_helmholtz_energy(density) + Z - logarithm(Z)
 
 
 def gas_density(
-    mixture: DetailMixture, pressure: Floats, temperature: Floats, *, two_roots_below: float
+    mixture: Mixture, pressure: Floats, temperature: Floats, *, two_roots_below: float
 ) -> DensityRoots:
     """Return the amount density of the gas; not found where there is none (see the module).
 
@@ -147,29 +140,30 @@ def gas_density(
     DensityRoots
         The result of a record depends on its own pressure and temperature only.
     """
-    target = pressure / (1e3 * GAS_CONSTANT * temperature)
-    sums = temperature_sums(mixture, temperature, orders=1)
-    gas = _walk(mixture, sums, target, upward=True)
+    target = pressure / (1e3 * mixture.gas_constant * temperature)
+    isotherms = mixture.isotherms(temperature)
+    steps = np.where(temperature < two_roots_below, _STEP, mixture.free_step)
+    gas = _walk(mixture, isotherms, target, steps, upward=True)
     doubtful = np.flatnonzero(gas.found & (temperature < two_roots_below))
     if len(doubtful) == 0:
         return gas
-    part = sums.part(doubtful)
-    dense = _walk(mixture, part, target[doubtful], upward=False)
+    part = isotherms.part(doubtful)
+    dense = _walk(mixture, part, target[doubtful], steps[doubtful], upward=False)
     density = gas.density[doubtful]
     two = dense.found & (dense.density > density * (1.0 + 1e-6))
     metastable = np.zeros(len(doubtful), dtype=np.bool_)
     chosen = np.flatnonzero(two)
     if len(chosen):
         both = part.part(chosen)
-        gas_energy = _gibbs_energy(mixture, both, density[chosen])
-        dense_energy = _gibbs_energy(mixture, both, dense.density[chosen])
+        gas_energy = _gibbs_energy(both, density[chosen])
+        dense_energy = _gibbs_energy(both, dense.density[chosen])
         metastable[chosen] = dense_energy <= gas_energy
     found = gas.found.copy()
     found[doubtful[metastable]] = False
     return DensityRoots(np.where(found, gas.density, np.nan), found)
 
 
-def dense_density(mixture: DetailMixture, pressure: Floats, temperature: Floats) -> DensityRoots:
+def dense_density(mixture: Mixture, pressure: Floats, temperature: Floats) -> DensityRoots:
     """Return the densest stable root's amount density; the gas's where it is the only one.
 
     Parameters
@@ -177,11 +171,13 @@ def dense_density(mixture: DetailMixture, pressure: Floats, temperature: Floats)
     pressure, temperature : (n,) arrays
         Pa (absolute) and K; positive, not NaN.
     """
-    target = pressure / (1e3 * GAS_CONSTANT * temperature)
-    sums = temperature_sums(mixture, temperature, orders=1)
-    dense = _walk(mixture, sums, target, upward=False)
+    target = pressure / (1e3 * mixture.gas_constant * temperature)
+    isotherms = mixture.isotherms(temperature)
+    steps = np.full(len(target), _STEP)
+    dense = _walk(mixture, isotherms, target, steps, upward=False)
     missing = np.flatnonzero(~dense.found)
     if len(missing):
-        only = _walk(mixture, sums.part(missing), target[missing], upward=True)
+        part = isotherms.part(missing)
+        only = _walk(mixture, part, target[missing], steps[missing], upward=True)
         dense.density[missing] = only.density
     return DensityRoots(dense.density, ~np.isnan(dense.density))

@@ -13,6 +13,12 @@ import numpy as np
 
 from meterfix.calc.elementary import exponential, power
 from meterfix.calc.gas.coefficient_tables import DetailComponent, DetailTables, detail_tables
+from meterfix.calc.gas.helmholtz import (
+    Properties,
+    ResidualSums,
+    ideal_mixture_heat_capacity,
+    properties_from_sums,
+)
 from meterfix.errors import GasError
 from meterfix.frames import Floats
 
@@ -49,6 +55,28 @@ class DetailMixture:
     groups: tuple[TermGroup, ...]
     ideal_terms: tuple[tuple[float, DetailComponent], ...]
 
+    @property
+    def gas_constant(self) -> float:
+        """8.31451 J/(mol K), the equation's own."""
+        return GAS_CONSTANT
+
+    @property
+    def free_step(self) -> float:
+        """Largest step in reduced density of a search where every isotherm rises [-]."""
+        return 0.05
+
+    def isotherms(self, temperature: Floats) -> DetailIsotherms:
+        """Return the isotherms at (n,) temperatures [K]."""
+        return DetailIsotherms(self, temperature_sums(self, temperature, orders=1))
+
+    def properties(self, temperature: Floats, density: Floats) -> Properties:
+        """Return the properties at (n,) temperatures [K] and amount densities [kmol/m3]."""
+        return properties(self, temperature, density)
+
+    def ideal_heat_capacity(self, temperature: Floats) -> Floats:
+        """Return the isobaric heat capacity of the ideal gas over R [-]."""
+        return ideal_heat_capacity(self, temperature)
+
 
 @dataclass(frozen=True, slots=True)
 class TemperatureSums:
@@ -72,19 +100,23 @@ class TemperatureSums:
 
 
 @dataclass(frozen=True, slots=True)
-class Properties:
-    """Properties per amount at given temperature and amount density; all (n,)."""
+class DetailIsotherms:
+    """The equation with composition and temperatures put in."""
 
-    compression_factor: Floats
-    isochoric_heat_capacity: Floats
-    """J/(mol K)."""
-    isobaric_heat_capacity: Floats
-    """J/(mol K)."""
-    isentropic_exponent: Floats
-    squared_speed_of_sound: Floats
-    """m2/s2."""
-    joule_thomson_coefficient: Floats
-    """K/Pa."""
+    mixture: DetailMixture
+    sums: TemperatureSums
+
+    def part(self, chosen: np.ndarray) -> DetailIsotherms:
+        """Return the isotherms of the chosen states."""
+        return DetailIsotherms(self.mixture, self.sums.part(chosen))
+
+    def pressure_terms(self, density: Floats) -> tuple[Floats, Floats]:
+        """Return Z and (dp/dD)_T / (R T), at (n,) amount densities [kmol/m3]."""
+        return pressure_terms(self.mixture, self.sums, density)
+
+    def residual_helmholtz_energy(self, density: Floats) -> Floats:
+        """Return the residual Helmholtz energy over R T [-], at (n,) amount densities."""
+        return residual_helmholtz_energy(self.mixture, self.sums, density)
 
 
 def _mean_of_powers(
@@ -313,22 +345,7 @@ def ideal_heat_capacity(mixture: DetailMixture, temperature: Floats) -> Floats:
     ----------
     .. [1] Jaeschke and Schley, Int. J. Thermophysics 16 (1995) 1381, as AGA 8 Part 1 uses it.
     """
-    total: Floats = np.zeros_like(temperature)
-    for x, component in mixture.ideal_terms:
-        part = np.full_like(temperature, component.ideal_coefficients[0])
-        thetas = component.ideal_temperatures
-        for n, (coefficient, theta) in enumerate(
-            zip(component.ideal_coefficients[1:], thetas, strict=True)
-        ):
-            if coefficient == 0.0:
-                continue
-            ratio = theta / temperature
-            small = exponential(-2.0 * ratio)
-            # (t/sinh t)^2 for the even terms, (t/cosh t)^2 for the odd ones, without overflow
-            base = (1.0 - small) if n % 2 == 0 else (1.0 + small)
-            part = part + coefficient * (4.0 * ratio * ratio * small / (base * base))
-        total = total + x * part
-    return total
+    return ideal_mixture_heat_capacity(mixture.ideal_terms, temperature)
 
 
 def properties(mixture: DetailMixture, temperature: Floats, density: Floats) -> Properties:
@@ -361,19 +378,11 @@ def properties(mixture: DetailMixture, temperature: Floats, density: Floats) -> 
         Z_T = Z_T + part_T * one
         a_T = a_T + part_T
         a_TT = a_TT + sums.groups[2, n] * f
-    slope_D = Z + Z_D
-    slope_T = Z + Z_T
-    cv = ideal_heat_capacity(mixture, temperature) - 1.0 - 2.0 * a_T - a_TT
-    cp = cv + slope_T * slope_T / slope_D
-    ratio = cp / cv
-    # written with the residual terms alone: nothing cancels as the density vanishes
-    with np.errstate(divide="ignore", invalid="ignore"):
-        joule_thomson = (Z_T - Z_D) / (slope_D * cp * density * (1e3 * GAS_CONSTANT))
-    return Properties(
-        compression_factor=Z,
-        isochoric_heat_capacity=GAS_CONSTANT * cv,
-        isobaric_heat_capacity=GAS_CONSTANT * cp,
-        isentropic_exponent=ratio * slope_D / Z,
-        squared_speed_of_sound=ratio * slope_D * temperature * (GAS_CONSTANT / mixture.molar_mass),
-        joule_thomson_coefficient=joule_thomson,
+    return properties_from_sums(
+        ResidualSums(Z, Z_D, Z_T, a_T, a_TT),
+        ideal_heat_capacity(mixture, temperature),
+        temperature,
+        density,
+        gas_constant=GAS_CONSTANT,
+        molar_mass=mixture.molar_mass,
     )

@@ -113,6 +113,20 @@ def test_offsets(offset, minutes):
     assert grammar.read(f"2026-07-01T12:00{offset}") == noon - minutes * 60_000_000
 
 
+def test_a_column_refuses_offsets_that_no_zone_has():
+    """Offsets in a column are judged as single ones are."""
+    grammar = time_grammar("%Y-%m-%dT%H:%M%z", hour_24=False)
+    texts = [
+        f"2026-07-01T12:00{offset}"
+        for offset in ("+01:00", "-14:00", "+14:01", "+00:60", "*01:00", "-99:00")
+    ]
+    column = fixed_times(grammar, texts[0])
+    assert column is not None
+    walls, accepted = column.read(pa.array(texts))
+    assert accepted.tolist() == [True, True, False, False, False, False]
+    assert walls[:2].tolist() == [grammar.read(text) for text in texts[:2]]
+
+
 @pytest.mark.parametrize("offset", ["", "z", "+1", "+1:00", "+14:01", "+00:60", "01:00", "UTC"])
 def test_texts_that_are_no_offsets(offset):
     """No offset, an unknown kind, or one that no zone has is refused with a sentence."""

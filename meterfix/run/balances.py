@@ -1,0 +1,243 @@
+"""Stored rows of balances: per envelope, quantity and gas day, and their months."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from datetime import date
+from typing import Any
+
+from meterfix.calc.balance.envelopes import DayBalance, Verdict, day_balance
+from meterfix.calc.balance.months import DayFigures, MonthBalance, month_balance
+from meterfix.model.calendar import SECOND, GasDayCalendar
+from meterfix.model.site import Envelope
+from meterfix.run.figures import BASIS, Row
+from meterfix.run.settle import Settled, Settling
+from meterfix.store.values import encode_array
+
+Key = tuple[str, str, str, str]
+"""Kind, envelope, quantity, gas day (a month's first)."""
+
+
+@dataclass
+class Balances:
+    """Balances of the days that a pass changes or closes, and of their months."""
+
+    settling: Settling
+    out: Settled
+    standing: dict[Key, tuple[Row, int]] = field(default_factory=dict)
+    """Rows as they stand with their revision, 0 while open; those of this pass included."""
+
+    def settle(self, *, everything: bool) -> None:
+        """Add the rows of all balances that change in this pass.
+
+        Parameters
+        ----------
+        everything : look at every gas day that has figures, because envelopes or tolerances may
+            have changed with the site file.
+        """
+        envelopes = {envelope.name: envelope for envelope in self.settling.index.site.envelopes}
+        book = self.settling.book
+        changed = self.out.changed_days
+        if everything:
+            changed = changed | book.known_keys()
+        wanted = {
+            (envelope.name, day)
+            for envelope in envelopes.values()
+            for meter, day in changed
+            if meter in meters_of(envelope)
+        }
+        open_rows = self.settling.ledger.rows("open_balance")
+        due = [row for row in open_rows if self.settling.closes(row["period_end_us"])]
+        wanted |= {
+            (row["envelope"], date.fromisoformat(row["gas_day"]))
+            for row in due
+            if row["kind"] == "gas_day" and row["envelope"] in envelopes
+        }
+        calendar = self.settling.index.site.calendar
+        months = {(name, calendar.month_of(day)) for name, day in wanted} | {
+            (row["envelope"], date.fromisoformat(row["gas_day"]))
+            for row in due
+            if row["kind"] == "month" and row["envelope"] in envelopes
+        }
+        if not wanted and not months:
+            return
+        days = sorted({day for _, day in wanted})
+        book.load(days)
+        book.load_records(days)
+        self._load(open_rows, {day for _, month in months for day in calendar.month_days(month)})
+        for name, day in sorted(wanted):
+            for quantity in envelopes[name].quantities:
+                self._store(self._day(envelopes[name], quantity, day))
+        for name, month in sorted(months):
+            for quantity in envelopes[name].quantities:
+                row = self._month(name, quantity, month)
+                if row is not None:
+                    self._store(row)
+
+    def _load(self, open_rows: Sequence[Row], days: set[date]) -> None:
+        self.standing.update({_key(row): (row, 0) for row in open_rows})
+        for row in self.settling.ledger.latest(
+            "balance_revision",
+            group=("envelope", "kind", "period_start_us", "quantity"),
+            number="revision",
+            where={"gas_day": sorted(day.isoformat() for day in days)},
+        ):
+            self.standing[_key(row)] = (row, row["revision"])
+
+    def _day(self, envelope: Envelope, quantity: str, day: date) -> Row:
+        book, calendar = self.settling.book, self.settling.index.site.calendar
+        start = calendar.start(day)
+        meters = meters_of(envelope)
+        balance = day_balance(
+            envelope,
+            quantity,
+            {meter: book.record(meter, day) for meter in meters},
+            envelope.tolerance.in_force(start),
+        )
+        standing = [(meter, book.days.get((meter, day))) for meter in meters]
+        links = [[meter, None if one is None else one.revision] for meter, one in standing]
+        return {**day_row(balance, start, calendar.end(day), day), "links": json.dumps(links)}
+
+    def _month(self, name: str, quantity: str, month: date) -> Row | None:
+        calendar = self.settling.index.site.calendar
+        days = [
+            self.standing[key]
+            for day in calendar.month_days(month)
+            if (key := ("gas_day", name, quantity, day.isoformat())) in self.standing
+        ]
+        if not days:
+            return None
+        links = [[row["gas_day"], revision] for row, revision in days]
+        return {
+            **month_row(calendar, name, quantity, month, [row for row, _ in days]),
+            "links": json.dumps(links),
+        }
+
+    def _store(self, row: Row) -> None:
+        """Store a balance as open, first closed or revised, if it says something new."""
+        before, revision = self.standing.get(_key(row), (None, 0))
+        if before is not None and revision and same_balance(before, row):
+            return
+        stamped = {
+            **row,
+            **{k: v for k, v in self.settling.versions.items() if k != "as_of_delivery"},
+        }
+        if not revision and not self.settling.closes(row["period_end_us"]):
+            if before is None or not same_balance(before, row) or before["links"] != row["links"]:
+                self.out.put("open_balance", stamped)
+            self.standing[_key(row)] = (row, 0)
+            return
+        settling = self.settling
+        self.out.add(
+            "balance_revision",
+            {
+                **stamped,
+                "basis": BASIS,
+                "revision": revision + 1,
+                "revision_reason": settling.revision_reason if revision else settling.close_reason,
+            },
+        )
+        if not revision:
+            names = ("envelope", "kind", "period_start_us", "quantity")
+            self.out.drop("open_balance", {name: row[name] for name in names})
+        self.standing[_key(row)] = (row, revision + 1)
+
+
+def meters_of(envelope: Envelope) -> tuple[str, ...]:
+    """Return the envelope's meters, in the order in, out, vented."""
+    return (*envelope.inflow, *envelope.outflow, *envelope.vented)
+
+
+def day_row(balance: DayBalance, start: int, end: int, day: date) -> Row:
+    """Return an envelope's balance of a gas day as a row, without its status and links."""
+    more = {
+        "input": balance.reason,
+        "hours": balance.hourly_verdict.reason,
+        "input_by_hour": list(balance.hourly_reasons) if any(balance.hourly_reasons) else [],
+    }
+    return {
+        "envelope": balance.envelope,
+        "kind": "gas_day",
+        "period_start_us": start,
+        "period_end_us": end,
+        "gas_day": day.isoformat(),
+        "quantity": balance.quantity,
+        "storage_change": balance.storage_change,
+        "measured_fraction": balance.measured_fraction,
+        "hourly": encode_array(balance.hourly),
+        **_figures(balance, more),
+    }
+
+
+def month_row(
+    calendar: GasDayCalendar,
+    envelope: str,
+    quantity: str,
+    month: date,
+    days: Sequence[Mapping[str, Any]],
+) -> Row:
+    """Return an envelope's balance of a month as a row, from its gas days' rows."""
+    month_days = calendar.month_days(month)
+    start, end = calendar.start(month_days[0]), calendar.end(month_days[-1])
+    balance = month_balance(
+        [
+            DayFigures(
+                gas_day=row["gas_day"],
+                duration=(row["period_end_us"] - row["period_start_us"]) / SECOND,
+                inflow=row["inflow"],
+                outflow=row["outflow"],
+                vented=row["vented"],
+                imbalance=row["imbalance"],
+                tolerance=row["tolerance"],
+            )
+            for row in days
+        ],
+        [day.isoformat() for day in month_days],
+        (end - start) / SECOND,
+    )
+    return {
+        "envelope": envelope,
+        "kind": "month",
+        "period_start_us": start,
+        "period_end_us": end,
+        "gas_day": month.isoformat(),
+        "quantity": quantity,
+        "storage_change": None,
+        "measured_fraction": balance.measured_fraction,
+        "hourly": None,
+        **_figures(balance, {"input": balance.reason}),
+    }
+
+
+def same_balance(one: Mapping[str, Any], other: Mapping[str, Any]) -> bool:
+    """Return whether two balance rows say the same, bit for bit; links may differ."""
+    return all(one[name] == other[name] for name in other if name != "links")
+
+
+def _figures(balance: DayBalance | MonthBalance, more: Mapping[str, Any]) -> Row:
+    reasons = {
+        "significant": balance.significant.reason,
+        "beyond_tolerance": balance.beyond_tolerance.reason,
+        "storage_change": balance.storage_reason,
+        **more,
+    }
+    return {
+        "inflow": balance.inflow,
+        "outflow": balance.outflow,
+        "vented": balance.vented,
+        "imbalance": balance.imbalance,
+        "tolerance": balance.tolerance,
+        "beyond_tolerance": _answer(balance.beyond_tolerance),
+        "significant": _answer(balance.significant),
+        "reason": json.dumps({k: v for k, v in reasons.items() if v}, sort_keys=True),
+    }
+
+
+def _answer(verdict: Verdict) -> str:
+    return verdict.answer.value
+
+
+def _key(row: Mapping[str, Any]) -> Key:
+    return (row["kind"], row["envelope"], row["quantity"], row["gas_day"])
