@@ -68,19 +68,20 @@ def lay(folder: Path) -> Path:
     for name, found in _below(packaged_logs(), ""):
         path = folder / "logs" / name
         path.parent.mkdir(parents=True, exist_ok=True)
-        _lay_file(found, path)
-        settle(path)
+        if _lay_file(found, path):
+            settle(path)
     return site
 
 
-def _lay_file(found: Traversable, path: Path) -> None:
-    """Write a file unless it is already there with these bytes; whole or not at all."""
+def _lay_file(found: Traversable, path: Path) -> bool:
+    """Write a file, whole or not at all, unless it is there with these bytes; say if written."""
     content = found.read_bytes()
     if path.is_file() and path.read_bytes() == content:
-        return
+        return False
     partial = path.with_name(path.name + ".partial")
     partial.write_bytes(content)
     partial.replace(path)
+    return True
 
 
 def _below(folder: Traversable, prefix: str) -> Iterator[tuple[str, Traversable]]:

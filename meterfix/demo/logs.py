@@ -45,14 +45,17 @@ def files_of(simulated: Simulated) -> Iterator[tuple[str, bytes]]:
 
 
 def settle(path: Path) -> None:
-    """Set a log file's times to shortly after the day in its name, as its logger would have.
+    """Set a new file's times to shortly after the day in its name, as its logger would have.
+
+    Where the file system's clock stands before that day, to a minute before the file was made:
+    a file from the future would wait to be read until its time comes.
 
     Raises
     ------
     ValueError
         If the file's name does not end in a date.
     """
-    written = day_after(path.name)
+    written = min(day_after(path.name), path.stat().st_mtime - 60.0)
     os.utime(path, (written, written))
 
 

@@ -77,6 +77,7 @@ FILES = (
     "cells_used",
     "cells_set_aside",
     "cells_duplicate",
+    "set_aside",
     "sha256",
 )
 PASSES = (
@@ -95,6 +96,7 @@ PASSES = (
 BRIEF = {
     "totals": (
         "meter",
+        "month",
         "gas_day",
         "period_start",
         "base_volume_m3",
@@ -107,10 +109,12 @@ BRIEF = {
     ),
     "balances": (
         "envelope",
+        "month",
         "gas_day",
         "period_start",
         "in",
         "out",
+        "vented",
         "imbalance",
         "tolerance",
         "unit",
@@ -119,6 +123,7 @@ BRIEF = {
     ),
     "alerts": ("kind", "since", "until", "severity", "message"),
     "files": (
+        "source",
         "name",
         "verdict",
         "lines_read",
@@ -126,28 +131,63 @@ BRIEF = {
         "lines_set_aside",
         "lines_duplicate",
         "lines_skipped",
-        "reason",
+    ),
+    "sources": (
+        "source",
+        "files",
+        "lines_read",
+        "lines_used",
+        "lines_set_aside",
+        "lines_duplicate",
+        "lines_skipped",
     ),
     "passes": ("sequence", "kind", "now", "files", "readings", "days", "note"),
 }
 """What a table on a screen of 100 columns holds; CSV and JSON carry every column."""
 
+PERIOD = {
+    "hour": frozenset({"month", "gas_day"}),
+    "gas-day": frozenset({"month", "period_start"}),
+    "month": frozenset({"gas_day", "period_start"}),
+}
+"""The columns of time that a table of hours, gas days or months leaves out."""
+
 HEADINGS = {
-    "base_volume_m3": "base volume m3",
+    "base_volume_m3": "base volume\nm3",
+    "mass_kg": "mass\nkg",
+    "energy_MJ": "energy\nMJ",
     "measured_fraction": "measured",
-    "beyond_tolerance": "beyond tolerance",
-    "lines_read": "read",
+    "beyond_tolerance": "beyond\ntolerance",
+    "lines_read": "lines\nread",
     "lines_used": "used",
-    "lines_set_aside": "set aside",
-    "lines_duplicate": "duplicate",
+    "lines_set_aside": "set\naside",
+    "lines_duplicate": "dupli-\ncate",
     "lines_skipped": "skipped",
-    "revision": "rev.",
+    "sequence": "no.",
+    "revision": "rev",
+    "gas_day": "gas day",
     "period_start": "from (UTC)",
     "since": "since (UTC)",
     "until": "until (UTC)",
     "now": "now (UTC)",
+    "flags": "flags, % of flow time",
 }
-"""Column titles of the tables where the column's own name is too long."""
+"""Column titles of the tables where the column's own name will not do."""
+
+SHORT_FLAGS = {
+    "pressure_ratio_outside_limits": "p ratio",
+    "reynolds_number_outside_limits": "Reynolds",
+    "geometry_outside_limits": "geometry",
+    "gas_model_outside_range": "gas range",
+    "gas_model_simplified": "simplified",
+    "over_range": "over range",
+    "signal_outside_range": "p, T range",
+    "implausible_value": "implausible",
+    "disputed_reading": "disputed",
+    "carried_value": "carried",
+    "mean_of_differential_pressure": "mean dp",
+}
+"""What a table calls a flag of `frames.FLAGS`; CSV and JSON give its whole name."""
 
 ALL = {
     "totals": TOTALS,

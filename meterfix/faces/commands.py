@@ -100,18 +100,20 @@ def check(site: Path, form: str, *, schema: bool) -> None:
     if schema:
         click.echo(json.dumps(site_schema(), indent=2))
         return
-    try:
-        found = read_site(site)
-    except SiteFileError as error:
-        if form == "json":
+    from meterfix.run.gas_check import check_gases
+
+    with _errors():
+        try:
+            found = read_site(site)
+            check_gases(found, site)
+        except SiteFileError as error:
+            if form == "text":
+                raise
             mistakes = [
                 {"where": m.where, "given": m.given, "allowed": m.allowed} for m in error.mistakes
             ]
             click.echo(json.dumps({"usable": False, "mistakes": mistakes}, indent=1))
             sys.exit(UNUSABLE)
-        _unusable(error)
-    except OSError as error:
-        _unusable(error)
     import sqlite3
 
     counts = {
@@ -200,9 +202,13 @@ def say_processed(done: Processed, form: str = "text") -> None:
 @click.argument("what", type=click.Choice(["totals", "balances", "alerts", "files", "passes"]))
 @SITE
 @click.option(
-    "--by", type=click.Choice(["hour", "gas-day", "month"]), default="gas-day", show_default=True
+    "--by",
+    type=click.Choice(["hour", "gas-day", "month"]),
+    help="The period of totals and balances.  [default: gas-day]",
 )
-@click.option("--meter", help="Only this meter.")
+@click.option(
+    "--meter", help="Only this meter; of balances its envelopes, of files those that feed it."
+)
 @click.option("--from", "start", type=Instant(), help="Only periods that end after this.")
 @click.option("--to", "end", type=Instant(), help="Only periods that begin before this.")
 @click.option(
@@ -213,31 +219,30 @@ def say_processed(done: Processed, form: str = "text") -> None:
     show_default=True,
 )
 def show(
-    what: str, site: Path, by: str, meter: str | None, start: Any, end: Any, form: str
+    what: str, site: Path, by: str | None, meter: str | None, start: Any, end: Any, form: str
 ) -> None:
     """Show what the database holds; nothing is computed.
 
-    Example: meterfix show totals --by gas-day --meter FT-101 --format csv
+    A bare date in --from or --to means the start of that gas day. Of alerts, files and passes
+    the time is when they were raised, arrived or ran.
+
+    Example: meterfix show totals --by hour --meter FT-101 --from 2026-10-25 --format csv
     """
+    if by is not None and what not in {"totals", "balances"}:
+        raise click.UsageError(f"--by goes with totals and balances, not with {what}")
+    if meter is not None and what == "passes":
+        raise click.UsageError("--meter does not go with passes")
     with _errors():
-        from meterfix.faces import render, shown
+        from meterfix.faces import listing
+        from meterfix.faces.asked import Asked
         from meterfix.run.opening import open_site
 
         with open_site(site, read_only=True) as opened:
-            if meter is not None and what in {"totals", "alerts"}:
-                known = sorted(opened.index.meters)
-                if meter not in known:
-                    raise click.UsageError(f"no meter {meter!r}; there are {', '.join(known)}")
-            asked = shown.Asked(by, meter, _edge(start, opened), _edge(end, opened))
-            rows = shown.SHOWN[what](opened, asked)
-            if form == "csv":
-                click.echo(render.as_csv(what, rows), nl=False)
-            elif form == "json":
-                click.echo(render.as_json(what, rows), nl=False)
-            else:
-                render.print_table(
-                    render.console_for(), what, rows, shown.heading(what, opened, rows)
-                )
+            if meter is not None and meter not in opened.index.meters:
+                known = ", ".join(sorted(opened.index.meters))
+                raise click.UsageError(f"no meter {meter!r}; there are {known}")
+            asked = Asked(by or "gas-day", meter, _edge(start, opened), _edge(end, opened))
+            listing.listing(what, opened, asked, form)
 
 
 @main.command()
@@ -315,11 +320,13 @@ def _errors() -> Iterator[None]:
     try:
         yield
     except MeterfixError as error:
-        _unusable(error)
+        _unusable(str(error))
+    except PermissionError as error:
+        _unusable(f"{error.filename}: {error.strerror}")
 
 
-def _unusable(error: Exception) -> NoReturn:
-    click.echo(str(error), err=True)
+def _unusable(sentence: str) -> NoReturn:
+    click.echo(sentence, err=True)
     sys.exit(UNUSABLE)
 
 

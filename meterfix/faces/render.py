@@ -6,10 +6,11 @@ import csv
 import io
 import json
 import math
+import textwrap
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
-from meterfix.faces.columns import ALL, BRIEF, HEADINGS
+from meterfix.faces.columns import ALL, BRIEF, HEADINGS, PERIOD, SHORT_FLAGS
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -18,6 +19,8 @@ if TYPE_CHECKING:
 Row = Mapping[str, Any]
 DIGITS = 6
 """Significant digits of a figure in a table; CSV and JSON carry all of them."""
+LONGEST_TEXT = 60
+"""Characters of a set-aside text that a table shows."""
 
 
 def as_csv(what: str, rows: Sequence[Row]) -> str:
@@ -36,45 +39,99 @@ def as_json(what: str, rows: Sequence[Row]) -> str:
     return json.dumps(full, indent=1, allow_nan=False) + "\n"
 
 
-def table(what: str, rows: Sequence[Row]) -> Table:
-    """Return rows as a table of the columns that matter most."""
+def table(what: str, rows: Sequence[Row], by: str = "") -> Table:
+    """Return rows as a table of the columns that matter most; `by` says what a period is."""
     from rich.table import Table
     from rich.text import Text
 
-    shown = [name for name in BRIEF[what] if _says_something(name, rows)]
-    if {"gas_day", "period_start"} <= set(shown) and _whole_days(rows):
-        shown.remove("period_start")
-    grid = Table(box=None, pad_edge=False, header_style="bold", padding=(0, 1))
+    hidden = PERIOD.get(by, frozenset())
+    shown = [n for n in BRIEF[what] if n not in hidden and _says_something(n, rows)]
+    grid = Table(box=None, pad_edge=False, header_style="bold", padding=(0, 2, 0, 0))
     for name in shown:
         number = any(isinstance(row.get(name), (int, float)) for row in rows)
         grid.add_column(
             HEADINGS.get(name, name.replace("_", " ")),
             justify="right" if number else "left",
             overflow="fold",
-            no_wrap=name not in {"flags", "message", "reason", "name", "beyond_tolerance", "note"},
+            no_wrap=name not in {"flags", "message", "name", "source", "kind", "note", "envelope"},
         )
     for row in rows:
-        grid.add_row(*(Text(_shown(name, row.get(name))) for name in shown))
+        grid.add_row(*(Text(_shown(name, row)) for name in shown))
     return grid
 
 
-def _whole_days(rows: Sequence[Row]) -> bool:
-    """Return whether each gas day stands once per subject, so that its start says nothing new."""
-    keys = [
-        (row.get("meter"), row.get("envelope"), row.get("quantity"), row.get("gas_day"))
-        for row in rows
-    ]
-    return all(row.get("gas_day") for row in rows) and len(set(keys)) == len(keys)
-
-
-def print_table(console: Console, what: str, rows: Sequence[Row], title: str = "") -> None:
+def print_table(
+    console: Console,
+    what: str,
+    rows: Sequence[Row],
+    title: str,
+    *,
+    by: str = "",
+    remarks: str = "",
+) -> None:
     """Print a table under its title, or say that there is nothing."""
-    if title:
-        console.print(f"\n{title}", style="bold", markup=False, highlight=False)
+    console.print(f"\n{title}", style="bold", markup=False, highlight=False)
+    if remarks:
+        console.print(remarks, markup=False, highlight=False)
     if rows:
-        console.print(table(what, rows), highlight=False)
+        console.print(table(what, rows, by), highlight=False)
     else:
         console.print("nothing to show", highlight=False)
+
+
+def print_notes(console: Console, title: str, notes: Sequence[str], limit: int) -> None:
+    """Print sentences under a table, the first of them if there are too many."""
+    if not notes:
+        return
+    console.print(f"\n{title}", style="bold", markup=False, highlight=False)
+    for note in notes[:limit]:
+        print_text(console, note, indent="  ")
+    if len(notes) > limit:
+        console.print(f"  and {len(notes) - limit} more: --format json lists them all")
+
+
+def print_text(console: Console, text: str, indent: str = "") -> None:
+    """Print a sentence, wrapped to the console's width."""
+    wrapped = textwrap.fill(
+        text,
+        width=console.width,
+        initial_indent=indent,
+        subsequent_indent=2 * indent,
+        break_on_hyphens=False,
+    )
+    console.print(wrapped, markup=False, highlight=False)
+
+
+def gaps(rows: Sequence[Row]) -> list[str]:
+    """Return why periods of a table are not wholly measured or have no imbalance."""
+    notes: dict[str, None] = {}
+    for row in rows:
+        if row["losses"]:
+            when = row["gas_day"] or row["month"]
+            subject = row.get("meter") or row.get("subject") or row["envelope"]
+            notes[f"{subject} {when}: {', '.join(row['losses'])}"] = None
+    return list(notes)
+
+
+def troubles(rows: Sequence[Row]) -> list[str]:
+    """Return what was rejected, waits or was set aside, file by file and line by line."""
+    notes: list[str] = []
+    for row in rows:
+        file = f"{row['source']}/{row['name']}" if row["name"] else row["source"]
+        if row["reason"]:
+            verdict = "" if row["verdict"] == "accepted" else f"{row['verdict']}: "
+            notes.append(f"{file}: {verdict}{row['reason']}")
+        for problem in row["set_aside"]:
+            reason, text = problem["reason"], _plain(problem["text"])
+            quoted = f" | {text}" if problem["text"] and text not in reason else ""
+            notes.append(f"{file}:{problem['line']}: {reason}{quoted}")
+    return notes
+
+
+def _plain(text: str) -> str:
+    """Return a set-aside text, shortened, its control characters escaped."""
+    plain = "".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in text)
+    return plain if len(plain) <= LONGEST_TEXT else f"{plain[:LONGEST_TEXT]}..."
 
 
 def console_for(width: int | None = None, *, error: bool = False) -> Console:
@@ -88,9 +145,8 @@ def console_for(width: int | None = None, *, error: bool = False) -> Console:
 
 
 def _says_something(name: str, rows: Sequence[Row]) -> bool:
-    return any(
-        row.get(name) not in {None, ""} for row in rows if not isinstance(row.get(name), dict)
-    )
+    silent = {None, "", 0.0} if name == "vented" else {None, ""}
+    return any(row.get(name) not in silent for row in rows)
 
 
 def _cell(value: Any) -> str:
@@ -105,18 +161,32 @@ def _cell(value: Any) -> str:
     return "'" + text if text[:1] in {"=", "+", "-", "@"} else text
 
 
-def _shown(name: str, value: Any) -> str:
+def _shown(name: str, row: Row) -> str:
+    value = row.get(name)
     if value is None:
-        return ""
-    if name == "measured_fraction":
-        return f"{math.floor(value * 1e4) / 100:.2f} %"
-    if isinstance(value, float):
-        return _number(value)
-    if name in {"period_start", "period_end", "since", "until", "now"}:
-        return str(value)[:16].replace("T", " ")
-    if name == "beyond_tolerance":
-        return str(value).partition(":")[0]
-    return str(value)
+        text = ""
+    elif name == "measured_fraction":
+        text = f"{math.floor(value * 1e4) / 100:.2f} %"
+    elif name == "flags":
+        text = "\n".join(
+            f"{short} {_percent(row['shares'][flag])}"
+            for flag, short in SHORT_FLAGS.items()
+            if flag in row["shares"]
+        )
+    elif isinstance(value, float):
+        text = _number(value)
+    elif name in {"period_start", "since", "until", "now"}:
+        text = str(value)[:16].replace("T", " ")
+    elif name == "beyond_tolerance":
+        answer = str(value).partition(":")[0]
+        text = "not judged" if answer == "cannot be judged" else answer
+    else:
+        text = str(value)
+    return text
+
+
+def _percent(share: float) -> str:
+    return f"{100 * share:.2f}" if share >= 1e-4 else "<0.01"
 
 
 def _number(value: float) -> str:

@@ -73,12 +73,12 @@ def _total(row: Mapping[str, Any]) -> Row:
     return {
         **_period(row),
         "meter": row["meter"],
-        "base_pressure_kPa": _scaled(row["base_pressure_Pa"], 1e-3),
+        "base_pressure_kPa": _divided(row["base_pressure_Pa"], 1e3),
         "base_temperature_degC": _celsius(row["base_temperature_K"]),
         "line_volume_m3": row["line_volume_m3"],
         "base_volume_m3": row["base_volume_m3"],
         "mass_kg": row["mass_kg"],
-        "energy_MJ": None if energy is None else energy / 1e6,
+        "energy_MJ": _divided(energy, 1e6),
         "calorific_value_kind": row["calorific_value_kind"] if energy is not None else None,
         "flow_time_s": row["flow_time_s"],
         "measured_fraction": row["measured_fraction"],
@@ -156,18 +156,18 @@ def _reasons(missing: Mapping[str, float], row: Mapping[str, Any]) -> str:
 
 def _balance(row: Mapping[str, Any]) -> Row:
     reasons = json.loads(row["reason"])
-    scale = 1e-6 if row["quantity"] == "energy" else 1.0
+    by = 1e6 if row["quantity"] == "energy" else 1.0
     return {
         **_period(row),
         "envelope": row["envelope"],
         "quantity": row["quantity"],
-        "in": _scaled(row["inflow"], scale),
-        "out": _scaled(row["outflow"], scale),
-        "vented": _scaled(row["vented"], scale),
-        "storage_change": _scaled(row["storage_change"], scale),
-        "imbalance": _scaled(row["imbalance"], scale),
+        "in": _divided(row["inflow"], by),
+        "out": _divided(row["outflow"], by),
+        "vented": _divided(row["vented"], by),
+        "storage_change": _divided(row["storage_change"], by),
+        "imbalance": _divided(row["imbalance"], by),
         "expanded_uncertainty": None,
-        "tolerance": _scaled(row["tolerance"], scale),
+        "tolerance": _divided(row["tolerance"], by),
         "unit": UNIT[row["quantity"]],
         "significant": _verdict(row["significant"], reasons.get("significant")),
         "beyond_tolerance": _verdict(row["beyond_tolerance"], reasons.get("beyond_tolerance")),
@@ -262,11 +262,11 @@ def _status(row: Mapping[str, Any]) -> Row:
 
 
 def _known(value: float) -> float | None:
-    return None if value != value else value  # noqa: PLR0124 - NaN is the one value unlike itself
+    return None if value != value else value + 0.0  # noqa: PLR0124 - NaN is the one value unlike itself
 
 
-def _scaled(value: float | None, scale: float) -> float | None:
-    return None if value is None else value * scale + 0.0
+def _divided(value: float | None, by: float) -> float | None:
+    return None if value is None else value / by + 0.0
 
 
 def _celsius(kelvin: float | None) -> float | None:
@@ -276,8 +276,9 @@ def _celsius(kelvin: float | None) -> float | None:
 def remarks(what: str, rows: Sequence[Mapping[str, Any]]) -> str:
     """Return what the figures of a table stand at, in one sentence or two."""
     if what == "totals" and rows:
-        bases = sorted({(row["base_pressure_kPa"], row["base_temperature_degC"]) for row in rows})
-        at = " or ".join(f"{p:g} kPa and {t:g} degC" for p, t in bases)
+        bases = {(row["base_pressure_kPa"], row["base_temperature_degC"]) for row in rows}
+        known = sorted((p, t) for p, t in bases if p is not None and t is not None)
+        at = " or ".join(f"{p:g} kPa and {t:g} degC" for p, t in known) or "several conditions"
         return f"Base volume at {at}; measured time only, never scaled up; {NO_UNCERTAINTY}."
     if what == "balances" and rows:
         return f"in = out + vented + imbalance; storage is not configured; {NO_UNCERTAINTY}."

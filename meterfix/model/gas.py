@@ -13,6 +13,8 @@ class StateModel(StrEnum):
 
     AGA8_DETAIL = "aga8_detail"
     """AGA Report No. 8 Part 1:2017, DETAIL; ISO 20765-1."""
+    GERG_2008 = "gerg_2008"
+    """AGA Report No. 8 Part 2:2017, GERG-2008; ISO 20765-2."""
     REFERENCE = "reference_equation"
     """The reference equation of state of a pure gas or of dry air, through CoolProp."""
     IDEAL = "ideal"

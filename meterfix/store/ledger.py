@@ -60,6 +60,7 @@ class Ledger:
         self._lock = WriterLock(opening.lock_file(archive_folder))
         self._writing: Connection | None = None
         self._recovery: Recovery | None = None
+        self._settled: set[str] = set()
         try:
             self.id = opening.checked_id(self.engine, archive_folder, self.anchor)
         except BaseException:
@@ -246,13 +247,15 @@ class Ledger:
         assert_head(record, head)
         sequence = head.sequence + 1
         rows = writing.prepared_record(record_with_pass(record), sequence)
-        replace = writing.prepared_outside(record.replace, sequence)
+        settled = [{"pack": pack} for pack in sorted(self._settled)]
+        replace = writing.prepared_outside({**record.replace, "settled_pack": settled}, sequence)
         audit = audit_row(record, head, rows, recovery.facts)
         new = Head(sequence, str(audit["row_hash"]))
         self.anchor.append(*recovery.before, intent_line(new))
         self._write(connection, record, sequence, rows, replace, audit, recovery)
         self.anchor.append(*recovery.after, f"done {sequence}")
         self._recovery = Recovery()
+        self._settled.clear()
         return sequence
 
     def _write(
@@ -461,6 +464,6 @@ class Ledger:
         """
         with self.engine.connect() as connection:
             entries, settled = unknown_entries(connection, self.archive, at_most)
-        if settled and self._writing is not None:
-            self.write_outside(replace={"settled_pack": [{"pack": pack} for pack in settled]})
+        # written with the next pass, so that a look without anything new changes nothing
+        self._settled.update(settled)
         return entries

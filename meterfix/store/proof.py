@@ -24,7 +24,7 @@ from meterfix.store.archive import Archive
 from meterfix.store.chain import EMPTY, Head, key_of, row_mark, split_marks, table_digest
 from meterfix.store.ledger import Ledger
 from meterfix.store.passes import SHARD, hash_of, read_head
-from meterfix.store.proof_archive import archive_findings
+from meterfix.store.proof_archive import archive_findings, unknown_findings
 from meterfix.store.proof_database import database_findings
 from meterfix.store.proof_finding import Finding
 from meterfix.store.tables import RECORD_TABLES, table_named
@@ -36,7 +36,7 @@ Progress = Callable[[str, int, int], None]
 """Called with what is being checked, how much is done, and of how much."""
 
 _SETTLING_WAIT = 0.1
-"""s between two looks at an anchor on which a pass is just being committed."""
+"""s between two looks at a ledger to which a pass is just being committed."""
 _SETTLING_LOOKS = 20
 
 
@@ -73,6 +73,7 @@ def check_store(ledger: Ledger, progress: Progress | None = None) -> list[Findin
             # an archive object of its own: what it has checked before does not count here
             archive = Archive(ledger.archive.folder, ledger.id)
             findings += archive_findings(connection, archive, report)
+        findings += _unknown_at_rest(ledger, archive)
     except (SQLAlchemyError, LedgerError) as error:
         findings.append(Finding("database", str(ledger.url), f"cannot be read on: {error}"))
     return findings
@@ -91,6 +92,18 @@ def _begin_at_rest(ledger: Ledger, connection: Connection) -> AnchorState:
             connection.rollback()
             threading.Event().wait(_SETTLING_WAIT)
     return state
+
+
+def _unknown_at_rest(ledger: Ledger, archive: Archive) -> list[Finding]:
+    """Return packs that the database does not know and that no pass is just about to commit."""
+    for look in range(_SETTLING_LOOKS):
+        if look:
+            threading.Event().wait(_SETTLING_WAIT)
+        with ledger.engine.connect() as connection:
+            found = list(unknown_findings(connection, archive))
+        if not found:
+            break
+    return found
 
 
 # --- the chain -------------------------------------------------------------------------------

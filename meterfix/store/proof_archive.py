@@ -17,9 +17,9 @@ Report = Callable[[str, int, int], None]
 
 
 def archive_findings(connection: Connection, archive: Archive, report: Report) -> Iterator[Finding]:
-    """Yield what is damaged, missing, or not known to the database."""
+    """Yield what is damaged or missing."""
     yield from _object_findings(connection, archive, report)
-    yield from _pack_findings(connection, archive, report)
+    yield from _pack_findings(archive, report)
     yield from _segment_findings(connection, archive, report)
 
 
@@ -46,7 +46,7 @@ def _object_findings(connection: Connection, archive: Archive, report: Report) -
         yield Finding("archive", f"raw_location {sha256}", "is of an object that is not known")
 
 
-def _pack_findings(connection: Connection, archive: Archive, report: Report) -> Iterator[Finding]:
+def _pack_findings(archive: Archive, report: Report) -> Iterator[Finding]:
     packs = archive.packs()
     for done, pack in enumerate(packs):
         report("packs", done, len(packs))
@@ -59,22 +59,30 @@ def _pack_findings(connection: Connection, archive: Archive, report: Report) -> 
         if found != pack:
             yield Finding("archive", where, f"now hashes to {found}")
         try:
-            index = archive.pack_index(pack)
+            archive.pack_index(pack)
         except DamagedArchiveError as error:
             yield Finding("archive", where, str(error))
-            continue
+    report("packs", len(packs), len(packs))
+
+
+def unknown_findings(connection: Connection, archive: Archive) -> Iterator[Finding]:
+    """Yield packs with deliveries that the database does not know; damaged packs are left out."""
+    for pack in archive.packs():
+        try:
+            index = archive.pack_index(pack)
+        except DamagedArchiveError:
+            continue  # has a finding of its own
         known = known_identities(connection, {entry.sha256 for entry in index})
         unknown = [e for e in index if identity_of(e.sha256, e.meta) not in known]
         if unknown:
             meta = unknown[0].meta
             yield Finding(
                 "archive",
-                where,
+                f"pack {pack}",
                 f"holds {len(unknown)} deliveries that the database does not know, the first "
                 f"{meta.get('source')}/{meta.get('name')} with raw object {unknown[0].sha256}; "
                 "the next pass adopts them",
             )
-    report("packs", len(packs), len(packs))
 
 
 def _segment_findings(

@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import json
 import struct
+from bisect import bisect_left, bisect_right
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any, BinaryIO
@@ -123,6 +124,8 @@ def _rows(signal: str, readings: RawReadings) -> NDArray[np.void]:
     rows["value"] += 0.0
     if not np.isfinite(rows["value"]).all():
         raise ValueError(f"signal {signal}: a reading is not finite")
+    if (np.diff(rows["instant"]) > 0).all():
+        return rows
     # every column takes part, so that one set of readings has one order
     order = np.lexsort(
         [rows["implausible"], rows["value"], rows["judgement"], rows["delivery"], rows["instant"]]
@@ -157,20 +160,22 @@ def decode_segment(
     for span in spans:
         if span["signal"] not in wanted or span["last_us"] < start or span["first_us"] > end:
             continue
-        file.seek(rows_at + span["start"] * _ROW.itemsize)
-        rows = np.frombuffer(file.read(span["count"] * _ROW.itemsize), dtype=_ROW)
-        instants = np.ascontiguousarray(rows["instant"])
-        first = int(np.searchsorted(instants, start, side="left"))
-        last = int(np.searchsorted(instants, end, side="right"))
+        at = rows_at + span["start"] * _ROW.itemsize
+        rows = np.memmap(file, dtype=_ROW, mode="r", offset=at, shape=(span["count"],))
+        instants = rows["instant"]
+        # bisected where it lies: a day out of a year's segment reads that day only
+        first = bisect_left(instants, start)
+        last = bisect_right(instants, end)
         found[span["signal"]] = _raw(rows[first:last])
     return found
 
 
 def _raw(rows: NDArray[np.void]) -> RawReadings:
+    """Return the rows' columns as arrays of their own."""
     return RawReadings(
-        np.ascontiguousarray(rows["instant"], dtype=np.int64),
-        np.ascontiguousarray(rows["value"], dtype=np.float64),
-        np.ascontiguousarray(rows["implausible"]).astype(np.bool_),
-        np.ascontiguousarray(rows["delivery"], dtype=np.int64),
-        np.ascontiguousarray(rows["judgement"], dtype=np.int64),
+        np.array(rows["instant"], dtype=np.int64),
+        np.array(rows["value"], dtype=np.float64),
+        np.array(rows["implausible"]).astype(np.bool_),
+        np.array(rows["delivery"], dtype=np.int64),
+        np.array(rows["judgement"], dtype=np.int64),
     )

@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import shutil
 import sqlite3
+import threading
 from pathlib import Path
 
 import pytest
@@ -12,14 +13,10 @@ from meterfix.store.proof import check_store
 from meterfix.store.triggers import sqlite_triggers
 
 
-@pytest.fixture(autouse=True)
-def _nobody_else_commits(monkeypatch):
-    monkeypatch.setattr(proof, "_SETTLING_WAIT", 0.0)
-
-
 @pytest.fixture
-def folder(tmp_path, scenario):
-    """Make a ledger of three passes, closed."""
+def folder(tmp_path, scenario, monkeypatch):
+    """Make a ledger of three passes, closed; nobody else commits to it."""
+    monkeypatch.setattr(proof, "_SETTLING_WAIT", 0.0)
     with scenario.open_ledger(tmp_path) as ledger:
         for last in (2, 3, 4):
             scenario.run(ledger, scenario.arrivals(*range(1, last + 1)), last * 1000)
@@ -275,3 +272,29 @@ def test_archive_gone(folder, scenario):
     shutil.rmtree(folder / "archive")
     with pytest.raises(LedgerError, match="no anchor"):
         scenario.open_ledger(folder)
+
+
+def test_proof_while_another_process_writes(tmp_path, scenario):
+    """A proof beside a working service is of one moment and finds nothing."""
+    scenario.open_ledger(tmp_path).close()
+    stop = threading.Event()
+
+    def serve() -> None:
+        with scenario.open_ledger(tmp_path) as writing:
+            for number in range(1, 29):
+                if stop.is_set():
+                    break
+                scenario.run(writing, scenario.arrivals(number), number * 1000)
+
+    thread = threading.Thread(target=serve)
+    thread.start()
+    try:
+        with scenario.open_ledger(tmp_path, read_only=True) as ledger:
+            proofs = 0
+            while thread.is_alive() and proofs < 10:
+                assert check_store(ledger) == []
+                proofs += 1
+    finally:
+        stop.set()
+        thread.join()
+    assert proofs > 1

@@ -118,6 +118,19 @@ class Processed:
             self._truths[key] = self.simulated.truth(meter, calibrated=calibrated)
         return self._truths[key]
 
+    def balance(
+        self, envelope: str, gas_day: date, quantity: str = "mass", kind: str = "gas_day"
+    ) -> dict[str, Any]:
+        """Return the one closed balance of a gas day or month."""
+        (row,) = self.rows(
+            "balance_revision",
+            envelope=envelope,
+            kind=kind,
+            gas_day=gas_day.isoformat(),
+            quantity=quantity,
+        )
+        return row
+
     def flags(self, meter: str, gas_day: date) -> dict[str, float]:
         """Return the flags of a gas day that are not 0, with their shares of the flow time."""
         shares: dict[str, float] = json.loads(self.day(meter, gas_day)["flags"])["shares"]

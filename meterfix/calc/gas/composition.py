@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 from meterfix.calc.gas.coefficient_tables import detail_tables
+from meterfix.calc.gas.gerg_tables import gerg_tables
 from meterfix.calc.gas.pure import REFERENCE_FLUIDS, PureGas
 from meterfix.errors import GasError
 from meterfix.model.gas import Composition, StateModel
@@ -20,6 +21,8 @@ def known_components(model: StateModel) -> tuple[str, ...]:
     detail = tuple(component.name for component in detail_tables().components)
     if model is StateModel.AGA8_DETAIL:
         return detail
+    if model is StateModel.GERG_2008:
+        return tuple(component.name for component in gerg_tables().components)
     if model is StateModel.REFERENCE:
         return tuple(name for name, _ in REFERENCE_FLUIDS)
     return (*detail, AIR)
@@ -49,7 +52,10 @@ def component_molar_mass(component: str, model: StateModel) -> float:
         )
     if model is StateModel.REFERENCE or component == AIR:
         return PureGas(component).molar_mass
-    masses = {c.name: c.molar_mass for c in detail_tables().components}
+    if model is StateModel.GERG_2008:
+        masses = {c.name: c.molar_mass for c in gerg_tables().components}
+    else:
+        masses = {c.name: c.molar_mass for c in detail_tables().components}
     return 1e-3 * masses[component]
 
 

@@ -1,11 +1,11 @@
-"""Amount density from pressure and temperature by a mixture equation: the gas root, or the dense one.
+"""Amount density from pressure and temperature by a mixture equation: gas root or dense root.
 
 What is detected as 'no gas', exactly:
 
-1. Walking up from zero density in steps of at most 0.05 in reduced density (wider ones are
-   taken only above the temperature of condition 2, where there is nothing to miss), the isotherm stops
+1. Walking up from zero density in steps of at most 0.05 in reduced density, the isotherm stops
    rising, (dp/dD)_T <= 0 or less pressure after a step, before it reaches the pressure: there
-   is no gas root.
+   is no gas root. (Wider steps are taken only above the temperature of condition 2, where
+   there is nothing to miss.)
 2. Below the mixture's mechanical critical temperature (the highest at which an isotherm of this
    composition stops rising anywhere) a gas root exists, and a second, denser stable root too,
    whose Gibbs energy at the same pressure, temperature and composition is the lower one: the
@@ -49,9 +49,10 @@ def _walk(
 ) -> DensityRoots:
     """Follow each isotherm from zero (or from the highest) density to the target.
 
-    The target is p/(R T) [kmol/m3]. Each record walks by Newton steps, limited to its largest
-    step in reduced density, until it has the root between two densities; then by Newton steps that fall back to
-    halving. A record that has converged, or has met a falling isotherm first, is frozen.
+    The target is p/(R T) [kmol/m3]. Each record walks by Newton steps, limited to its own
+    largest step in reduced density, until it has the root between two densities; then by
+    Newton steps that fall back to halving. A record that has converged, or has met a falling
+    isotherm first, is frozen.
     """
     n = len(target)
     density = np.full(n, np.nan)

@@ -8,6 +8,7 @@ from meterfix.calc.elementary import contiguous
 from meterfix.calc.gas.composition import AIR, molar_mass, mole_fractions, single_component
 from meterfix.calc.gas.detail import detail_mixture, ideal_heat_capacity
 from meterfix.calc.gas.detail_gas import DetailGas
+from meterfix.calc.gas.gerg_gas import GergGas
 from meterfix.calc.gas.pure import PureGas
 from meterfix.calc.gas.state import EquationOfState, GasStates, not_known
 from meterfix.errors import GasError
@@ -110,6 +111,8 @@ def equation_of_state(composition: Composition, density_model: DensityModel) -> 
     model = density_model.model
     if model is StateModel.AGA8_DETAIL:
         return DetailGas(mole_fractions(composition, model))
+    if model is StateModel.GERG_2008:
+        return GergGas(mole_fractions(composition, model))
     if model is StateModel.REFERENCE:
         mole_fractions(composition, model)  # raises what a composition cannot be
         component = single_component(composition)

@@ -111,9 +111,9 @@ class ResidualSums:
     """Density times dZ/dD."""
     Z_T: Floats
     """Temperature times dZ/dT."""
-    a_T: Floats
+    A_T: Floats
     """Temperature times the Helmholtz energy's derivative by it."""
-    a_TT: Floats
+    A_TT: Floats
     """Temperature squared times the Helmholtz energy's second derivative by it."""
 
 
@@ -139,7 +139,7 @@ def properties_from_sums(
     """
     slope_D = sums.Z + sums.Z_D
     slope_T = sums.Z + sums.Z_T
-    cv = ideal_heat_capacity - 1.0 - 2.0 * sums.a_T - sums.a_TT
+    cv = ideal_heat_capacity - 1.0 - 2.0 * sums.A_T - sums.A_TT
     cp = cv + slope_T * slope_T / slope_D
     ratio = cp / cv
     # written with the residual terms alone: nothing cancels as the density vanishes

@@ -1,0 +1,213 @@
+"""A process that is killed at any moment and started again loses nothing and doubles nothing."""
+
+from __future__ import annotations
+
+import os
+import random
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import pytest
+
+import meterfix
+
+MOMENTS = 20
+SEED = 20_260_304
+LONGEST = 120.0
+"""s that a process may take on a busy machine before a test gives up on it."""
+
+
+def start(site: Path, hall, *, program: tuple[str, ...] = ("-m", "meterfix")) -> subprocess.Popen:
+    """Start a real `process` command on the site."""
+    command = [sys.executable, *program, "process", "--site", str(site), "--now", hall.LATE]
+    found = [str(Path(meterfix.__file__).parents[1]), os.environ.get("PYTHONPATH", "")]
+    environment = {**os.environ, "PYTHONPATH": os.pathsep.join(filter(None, found))}
+    return subprocess.Popen(
+        command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, env=environment
+    )
+
+
+def finished(process: subprocess.Popen) -> tuple[int, str]:
+    """Wait for a process; return its exit code and what it said."""
+    out, err = process.communicate(timeout=LONGEST)
+    return process.returncode, out + err
+
+
+def until_work_begins(process: subprocess.Popen, site: Path) -> None:
+    """Wait until the process has loaded its code and takes the ledger's lock."""
+    give_up = time.monotonic() + LONGEST
+    while not (site.parent / "archive" / "lock").exists():
+        assert process.poll() is None, finished(process)
+        assert time.monotonic() < give_up
+        time.sleep(0.002)
+
+
+def check_restarted(site: Path, hall, undisturbed: Path) -> None:
+    """Start again, then compare with a ledger that nobody disturbed."""
+    hall.run(site)
+    proof = hall.prove(site)
+    assert not proof.findings
+    assert proof.files == len(hall.rows(site, "delivery"))
+    assert hall.differences(hall.figures(site), hall.figures(undisturbed)) == []
+    assert hall.sums(site) == hall.sums(undisturbed)
+    assert hall.rows(site, "attempt") == []
+    assert hall.rows(site, "alert", kind="quarantined file") == []
+
+
+@pytest.fixture(scope="module")
+def working_time(hall, flawed_day, tmp_path_factory) -> float:
+    """How long a real process works on the day once its code is loaded [s]."""
+    import shutil
+
+    folder = tmp_path_factory.mktemp("measured") / "site"
+    shutil.copytree(flawed_day.parent, folder)
+    process = start(folder / flawed_day.name, hall)
+    until_work_begins(process, folder / flawed_day.name)
+    begun = time.monotonic()
+    code, said = finished(process)
+    assert code == 0, said
+    return time.monotonic() - begun
+
+
+_drawn = random.Random(SEED)
+FRACTIONS = [round(_drawn.random(), 3) for _ in range(MOMENTS)]
+
+
+@pytest.mark.parametrize("fraction", FRACTIONS)
+def test_killed_at_a_random_moment(fraction, hall, copy_of, flawed_day, undisturbed, working_time):
+    """Wherever SIGKILL meets the process, the next one ends with the bits of an undisturbed one."""
+    site = copy_of(flawed_day)
+    process = start(site, hall)
+    until_work_begins(process, site)
+    time.sleep(fraction * working_time)
+    process.kill()
+    finished(process)
+    check_restarted(site, hall, undisturbed)
+
+
+def test_killed_again_and_again_on_one_ledger(hall, copy_of, flawed_day, undisturbed, working_time):
+    """Kill after kill on one ledger sets no good file apart and loses nothing."""
+    site = copy_of(flawed_day)
+    drawn = random.Random(SEED + 1)
+    kills = 0
+    while kills < 8:
+        process = start(site, hall)
+        # the second and later ones find the lock's file in place: loading takes about as long
+        if kills == 0:
+            until_work_begins(process, site)
+            time.sleep(0.7 * working_time)
+        else:
+            time.sleep(1.0 + drawn.random() * working_time)
+        process.kill()
+        finished(process)
+        kills += process.returncode == -signal.SIGKILL
+        if process.returncode == 0:
+            break
+    check_restarted(site, hall, undisturbed)
+
+
+NAMED = ("pack write", "pack renamed", "mid-transaction", "before done")
+
+
+@pytest.mark.parametrize("moment", NAMED)
+def test_killed_at_a_named_moment(moment, hall, copy_of, flawed_day, undisturbed):
+    """Killed in the pack's write, after its rename, in mid-transaction, before 'done': the same."""
+    site = copy_of(flawed_day)
+    child = Path(__file__).with_name("child_killed_at.py")
+    process = start(site, hall, program=(str(child), moment))
+    code, said = finished(process)
+    assert code == -signal.SIGKILL, said
+    packs = list((site.parent / "archive" / "packs").glob("*.pack"))
+    parts = list((site.parent / "archive" / "packs").glob("*.part"))
+    assert (len(packs), len(parts)) == ((0, 1) if moment == "pack write" else (1, 0))
+    anchor = (site.parent / "archive" / "anchor").read_text()
+    assert ("intent 1" in anchor) == (moment in {"mid-transaction", "before done"})
+    assert "done 1" not in anchor
+    assert len(hall.rows(site, "audit")) == (moment == "before done")
+    check_restarted(site, hall, undisturbed)
+    resolved = [row["kind"] for row in hall.rows(site, "pass")]
+    assert ("resolution" in resolved) == (moment in {"mid-transaction", "before done"})
+
+
+# --- files that bring a process down ------------------------------------------------------------
+
+
+def start_with_a_deadly_file(site: Path, hall, how: str) -> tuple[int, str]:
+    child = Path(__file__).with_name("child_with_deadly_file.py")
+    return finished(start(site, hall, program=(str(child), how)))
+
+
+def lay_deadly_file(site: Path, hall, flawed_day: Path) -> None:
+    good = sorted((flawed_day.parent / "logs" / "weather").glob("*.csv"))[0]
+    content = good.read_bytes() + b"2026-10-02T20:00:00Z,DEADLY\n"
+    hall.lay(site.parent / "logs" / "weather" / "barometer_deadly.csv", content)
+
+
+@pytest.mark.parametrize("how", ["raise", "abort"])
+def test_file_that_crashes_every_pass(how, hall, copy_of, flawed_day, undisturbed):
+    """After two crashes a file is tried alone, then quarantined with an alert; the rest gets in."""
+    site = copy_of(flawed_day)
+    lay_deadly_file(site, hall, flawed_day)
+    starts = 0
+    code = None
+    while code not in (0, 1):
+        code, said = start_with_a_deadly_file(site, hall, how)
+        starts += 1
+        assert starts <= 3, said
+        if how == "abort" and starts < 3:
+            assert code == -signal.SIGABRT, said
+            assert len(hall.rows(site, "delivery")) == 0
+    assert code == 1, said
+    assert starts == (1 if how == "raise" else 3)
+    assert "quarantined" not in said or "barometer_deadly.csv" in said
+    named = {row["sequence"]: row["name"] for row in hall.rows(site, "delivery")}
+    verdicts = {named[f["delivery_sequence"]]: f["verdict"] for f in hall.rows(site, "fate")}
+    assert verdicts.pop("barometer_deadly.csv") == "quarantined"
+    assert set(verdicts.values()) == {"accepted"}
+    assert len(verdicts) == len(hall.rows(undisturbed, "delivery"))
+    assert [row["subject"] for row in hall.rows(site, "alert", kind="quarantined file")] == [
+        "weather: barometer_deadly.csv"
+    ]
+    assert hall.rows(site, "attempt") == []
+    assert hall.differences(hall.figures(site), hall.figures(undisturbed)) == []
+    assert not hall.prove(site).findings
+    # and it is left alone from now on
+    before = hall.everything(site)
+    assert start_with_a_deadly_file(site, hall, how)[0] == 0
+    assert hall.differences(before, hall.everything(site)) == []
+
+
+def test_failure_that_is_no_files_fault_sets_none_apart(hall, copy_of, flawed_day, monkeypatch):
+    """A program that fails with good files in hand says so, and quarantines none of them."""
+    from meterfix.run import passes
+
+    def broken(*_args, **_more):
+        raise ZeroDivisionError("a mistake of the program")
+
+    site = copy_of(flawed_day)
+    with monkeypatch.context() as patched:
+        patched.setattr(passes, "compute", broken)
+        for _ in range(3):
+            with pytest.raises(ZeroDivisionError):
+                hall.run(site)
+    hall.run(site)
+    assert {fate["verdict"] for fate in hall.rows(site, "fate")} == {"accepted"}
+    assert hall.rows(site, "attempt") == []
+    assert not hall.prove(site).findings
+
+
+def test_marks_of_an_attempt_go_when_the_file_changes(hall, copy_of, flawed_day):
+    """A mark beside bytes that were replaced before the next pass does not stay for ever."""
+    site = copy_of(flawed_day)
+    lay_deadly_file(site, hall, flawed_day)
+    assert start_with_a_deadly_file(site, hall, "abort")[0] == -signal.SIGABRT
+    assert {row["crashes"] for row in hall.rows(site, "attempt")} == {1}
+    path = site.parent / "logs" / "weather" / "barometer_deadly.csv"
+    hall.lay(path, path.read_bytes().replace(b",DEADLY", b",1001.2"))
+    hall.run(site)
+    assert hall.rows(site, "attempt") == []
+    assert os.path.exists(path)
+    assert {fate["verdict"] for fate in hall.rows(site, "fate")} == {"accepted"}

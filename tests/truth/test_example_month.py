@@ -1,0 +1,235 @@
+"""The packaged example from end to end: nothing lost, everything closed, a healthy site."""
+
+from __future__ import annotations
+
+import gzip
+import json
+import math
+from collections import Counter
+from datetime import date
+
+import pytest
+
+from meterfix.demo.works import BALANCES, COMPOSITION_CHANGE_DAY, FEEDS
+
+INCOMPLETE = {
+    "FT-301": date(2026, 10, 7),  # its logger stood for half an hour
+    "FT-101": date(2026, 10, 14),  # zero check
+    "FT-201": date(2026, 10, 20),  # plate exchanged
+    "FT-203": date(2026, 10, 22),  # its logger had no power
+}
+
+
+def _lines(content, name):
+    text = gzip.decompress(content) if name.endswith(".gz") else content
+    assert text.endswith(b"\n")
+    return text.count(b"\n")
+
+
+def _files(example):
+    """Return every log on disk: (source, name) to its number of lines."""
+    folder = example.folder / "logs"
+    return {
+        (path.parent.name, path.name): _lines(path.read_bytes(), path.name)
+        for path in folder.glob("*/*.csv*")
+    }
+
+
+def _fates(example):
+    """Return each delivery's one judgement: (source, name) to its row."""
+    deliveries = {row["sequence"]: row for row in example.rows("delivery")}
+    fates = {}
+    for fate in example.rows("fate"):
+        delivery = deliveries[fate["delivery_sequence"]]
+        assert fate["judgement"] == 1
+        fates[delivery["source"], delivery["name"].rpartition("/")[2]] = fate
+    assert len(fates) == len(deliveries)
+    return fates
+
+
+def test_every_line_of_every_file_has_a_fate(example):
+    """Lines read = used + set aside + duplicate + skipped, per file and source; read = on disk."""
+    files, fates = _files(example), _fates(example)
+    assert set(files) == set(fates)
+    sums: dict[str, Counter[str]] = {}
+    for (source, name), fate in fates.items():
+        assert fate["verdict"] == "accepted", name
+        assert fate["lines_read"] == files[source, name], name
+        parts = ("lines_used", "lines_set_aside", "lines_duplicate", "lines_skipped")
+        assert fate["lines_read"] == sum(fate[part] for part in parts), name
+        sums.setdefault(source, Counter()).update(
+            {part: fate[part] for part in ("lines_read", *parts)}
+        )
+    assert set(sums) == {*(feed.name for feed in FEEDS), "weather"}
+    for source, counts in sums.items():
+        on_disk = sum(lines for (of, _), lines in files.items() if of == source)
+        assert counts["lines_read"] == on_disk
+        assert counts["lines_read"] == counts.total() - counts["lines_read"]
+
+
+def test_every_flaw_is_found_and_nothing_else(example):
+    """Set aside, duplicate and skipped lines and bad cells: as many as the simulator put in."""
+    logs = example.simulated.run_logs.values()
+    gas = [log for log in logs if log.run.name.startswith("FT")]
+    shared = example.simulated.air_file_flaws
+    lines, cells = Counter(), Counter()
+    for flaws, interval in ((log.flaws, log.run.feed.interval_s) for log in gas):
+        lines["lines_set_aside"] += len(flaws.garbled)
+        lines["lines_duplicate"] += sum(
+            (last - first) // (interval * 1_000_000) + 1 for first, last in flaws.doubled
+        )
+        lines["lines_skipped"] += len(flaws.headers)
+    lines["lines_set_aside"] += len(shared.garbled)
+    lines["lines_duplicate"] += sum(
+        (last - first) // 60_000_000 + 1 for first, last in shared.doubled
+    )
+    lines["lines_skipped"] += len(shared.headers) + len(_files(example))
+    cells["cells_set_aside"] = sum(len(log.flaws.bad_cells) for log in logs)
+    fates = _fates(example).values()
+    assert min(lines.values()) > 0
+    assert {name: sum(fate[name] for fate in fates) for name in lines} == lines
+    assert sum(fate["cells_set_aside"] for fate in fates) == cells["cells_set_aside"] > 0
+    set_aside = example.rows("set_aside")
+    assert len(set_aside) == lines["lines_set_aside"] + cells["cells_set_aside"]
+    assert all(row["reason"] and row["line"] > 1 for row in set_aside)
+
+
+def test_every_gas_day_and_the_month_are_closed(example):
+    """Every gas day of October and every month is provisional in its first revision."""
+    days = {day.isoformat() for day in example.simulated.days}
+    for kind, count in (("gas_day", 31), ("month", 1)):
+        rows = example.rows("total_revision", kind=kind)
+        assert len(rows) == count * len(example.simulated.meters)
+        assert {row["revision"] for row in rows} == {1}
+    closed = {
+        (row["meter"], row["gas_day"]) for row in example.rows("total_revision", kind="gas_day")
+    }
+    assert closed == {(meter, day) for meter in example.simulated.meters for day in days}
+    events = example.rows("period_event")
+    assert Counter((row["kind"], row["stage"]) for row in events) == {
+        ("gas_day", "provisional"): 31 * 11,
+        ("month", "provisional"): 11,
+    }
+    for table in ("open_total", "open_hourly", "open_balance", "waiting", "attempt"):
+        assert example.rows(table) == [], table
+
+
+def test_a_healthy_site_raises_nothing(example):
+    """No alert, no conflict, no disputed reading."""
+    for table in ("alert", "conflict"):
+        assert example.rows(table) == [], table
+    for row in example.rows("total_revision"):
+        assert json.loads(row["flags"])["disputed_readings"] == 0
+
+
+def test_flags_are_those_of_lost_cells_only(example, meter):
+    """Where a pressure or temperature was lost it is carried: under 1 % of the flow, on few days.
+
+    Nothing is over range, outside a transmitter's range, or outside limits of use.
+    """
+    flagged = 0
+    for day in example.simulated.days:
+        flags = example.flags(meter, day)
+        assert set(flags) <= {"carried_value"}, (day, flags)
+        assert all(share < 0.01 for share in flags.values())
+        flagged += bool(flags)
+    assert 1 <= flagged <= 8
+
+
+def test_time_is_missing_on_the_four_known_days_only(example, meter):
+    """All gas days are measured whole, but for one of each of four meters: more than 95 %."""
+    for day in example.simulated.days:
+        fraction = example.day(meter, day)["measured_fraction"]
+        if INCOMPLETE.get(meter) == day:
+            assert 0.95 < fraction < 1.0
+        else:
+            assert fraction == 1.0, day
+            assert json.loads(example.day(meter, day)["missing"]) == {}
+
+
+def test_balances_have_a_verdict_on_complete_days(example):
+    """Within tolerance on complete gas days; elsewhere no verdict, and the meter is named."""
+    verdicts = Counter()
+    for balance in BALANCES:
+        meters = (*balance.inflow, *balance.outflow)
+        for day in example.simulated.days:
+            incomplete = [meter for meter in meters if INCOMPLETE.get(meter) == day]
+            for quantity in balance.quantities:
+                row = example.balance(balance.name, day, quantity)
+                reason = json.loads(row["reason"])
+                verdicts[row["beyond_tolerance"]] += 1
+                assert row["significant"] == "cannot be judged"
+                assert reason["significant"]
+                if incomplete:
+                    assert row["beyond_tolerance"] == "cannot be judged"
+                    assert row["imbalance"] is None
+                    assert incomplete[0] in reason["beyond_tolerance"]
+                    continue
+                assert row["beyond_tolerance"] == "no"
+                imbalance = row["inflow"] - row["outflow"] - row["vented"]
+                assert row["imbalance"] == pytest.approx(imbalance, rel=1e-9)
+                assert row["tolerance"] == pytest.approx(0.015 * row["inflow"], rel=1e-12)
+                assert abs(row["imbalance"]) < 0.005 * row["inflow"]
+    # works: three days of three quantities; hall: one day of three
+    assert verdicts == {"no": 31 * 8 - 12, "cannot be judged": 12}
+
+
+def test_balances_add_up_what_the_meters_stored(example):
+    """In and out are the last bit of fsum over the meters' stored gas days."""
+    columns = {"mass": "mass_kg", "base_volume": "base_volume_m3", "energy": "energy_J"}
+    for balance in BALANCES:
+        for row in example.rows("balance_revision", envelope=balance.name, kind="gas_day"):
+            day = date.fromisoformat(row["gas_day"])
+            for column, meters in (("inflow", balance.inflow), ("outflow", balance.outflow)):
+                stored = [example.day(meter, day)[columns[row["quantity"]]] for meter in meters]
+                assert row[column] == pytest.approx(math.fsum(stored), rel=1e-14)
+
+
+def test_balance_of_the_month_adds_up_its_complete_days(example):
+    """A month's balance is fsum over its complete gas days, to the last bit; the others named."""
+    month = example.simulated.month.first_day
+    for balance in BALANCES:
+        for quantity in balance.quantities:
+            row = example.balance(balance.name, month, quantity, "month")
+            days = [example.balance(balance.name, day, quantity) for day in example.simulated.days]
+            whole = [day for day in days if day["imbalance"] is not None]
+            for column in ("inflow", "outflow", "vented", "imbalance", "tolerance"):
+                assert row[column] == math.fsum(day[column] for day in whole), column
+            assert row["beyond_tolerance"] == "no"
+            left_out = [day["gas_day"] for day in days if day["imbalance"] is None]
+            assert all(day in json.loads(row["reason"])["input"] for day in left_out)
+            assert (row["measured_fraction"] == 1.0) == (not left_out)
+
+
+def test_imbalance_is_the_transmitters_doing(example):
+    """Nothing leaks: each imbalance is what the drawn calibration errors make, within 4 s.e."""
+    simulated = example.simulated
+    noise = {meter: simulated.noise_error(meter)["mass_kg"] for meter in simulated.meters}
+    judged = 0
+    for balance in BALANCES:
+        for day in example.simulated.days:
+            row = example.balance(balance.name, day)
+            if row["imbalance"] is None:
+                continue
+            judged += 1
+            expected = math.fsum(
+                sign * example.truth(meter, calibrated=True).loc[day, "mass_kg"]
+                for sign, meters in ((1.0, balance.inflow), (-1.0, balance.outflow))
+                for meter in meters
+            )
+            error = math.hypot(*(noise[m][day] for m in (*balance.inflow, *balance.outflow)))
+            assert abs(row["imbalance"] - expected) <= 4.0 * error
+    assert judged == 3 * 31 - 4
+
+
+def test_energy_is_base_volume_times_the_contract_s_value(example):
+    """Gross 38.74 MJ/m3 before the supplier's change of gas, 38.95 MJ/m3 from gas day 16 on."""
+    for meter in example.simulated.meters:
+        if not meter.startswith("FT"):
+            continue
+        for day in example.simulated.days:
+            value = 38.74e6 if day.day < COMPOSITION_CHANGE_DAY else 38.95e6
+            stored = example.day(meter, day)
+            assert stored["energy_J"] == pytest.approx(
+                value * stored["base_volume_m3"], rel=1e-13, abs=0.0
+            )
