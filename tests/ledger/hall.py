@@ -30,8 +30,8 @@ OTHERS = ("-101", "-102", "-201", "-203", "FA-4", "PDT-4", "PT-4", "TT-4", "supp
           "compressed_air", "envelope.works", "envelope.air")  # fmt: skip
 WRITTEN = datetime(2026, 10, 5, tzinfo=UTC).timestamp()
 """When all logs were last changed, unless a test says otherwise."""
-EARLY = "2026-10-01T12:00:00Z"
-"""Before any deadline."""
+EARLY = "2026-10-02T06:00:00Z"
+"""After the first gas day, before its deadline; rows later than `now` are set aside."""
 LATE = "2026-11-03T12:00:00Z"
 """After every deadline, the month's included."""
 

@@ -13,7 +13,7 @@ import sqlite3
 import struct
 from collections.abc import Callable
 from contextlib import closing
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date, datetime
 from functools import cached_property
 from pathlib import Path
@@ -46,9 +46,7 @@ def _decoded(row: sqlite3.Row) -> dict[str, tuple[float, ...]]:
     count = row["hours"] * row["columns"]
     assert row["columns"] == len(HOURLY_COLUMNS)
     values = struct.unpack(f"<{count}d", row["statistics"])
-    return {
-        name: values[place :: row["columns"]] for place, name in enumerate(HOURLY_COLUMNS)
-    }
+    return {name: values[place :: row["columns"]] for place, name in enumerate(HOURLY_COLUMNS)}
 
 
 @dataclass(frozen=True)
@@ -108,15 +106,24 @@ class Processed:
         return _decoded(row)
 
     @cached_property
-    def _truths(self) -> dict[tuple[str, bool], pd.DataFrame]:
+    def _truths(self) -> dict[tuple[str, str], pd.DataFrame]:
         return {}
 
-    def truth(self, meter: str, *, calibrated: bool = False) -> pd.DataFrame:
-        """Return the simulator's totals by gas day, computed once."""
-        key = (meter, calibrated)
-        if key not in self._truths:
-            self._truths[key] = self.simulated.truth(meter, calibrated=calibrated)
-        return self._truths[key]
+    def truth(self, meter: str, *, of: str = "true") -> pd.DataFrame:
+        """Return the simulator's totals by gas day, computed once.
+
+        `of` is "true" values; "shown" ones, with the drawn calibration errors; or "logged" ones,
+        with those and the noise, before rounding (the barometer's without noise).
+        """
+        if (meter, of) not in self._truths:
+            span = self.simulated
+            if of == "logged":
+                log = span.run_logs[meter]
+                span = replace(
+                    span, run_logs={**span.run_logs, meter: replace(log, shown=log.logged)}
+                )
+            self._truths[meter, of] = span.truth(meter, calibrated=of != "true")
+        return self._truths[meter, of]
 
     def balance(
         self, envelope: str, gas_day: date, quantity: str = "mass", kind: str = "gas_day"

@@ -27,7 +27,7 @@ def _deviates(span, meter, quantity="mass_kg"):
     Gas days without flow are left out, once their result is seen to be exactly 0. The expected
     total holds the second-order bias of the root: at most 2e-5 here, 0.08 standard errors.
     """
-    expected = span.truth(meter, calibrated=True)[quantity]
+    expected = span.truth(meter, of="shown")[quantity]
     noise = span.simulated.noise_error(meter)
     found = []
     for day in span.simulated.days:
@@ -55,13 +55,28 @@ def test_example_is_within_four_standard_errors(example, meter):
         assert max(map(abs, deviates)) <= STANDARD_ERRORS
 
 
+def test_noise_is_all_that_there_is_between_them(example, meter):
+    """From the very values logged, noise and all, the simulator's rates give the stored totals.
+
+    What is left is the rounding to the loggers' decimals and the barometer's noise: 1e-5 of a
+    gas day at most, where the noise itself is 1e-4.
+    """
+    logged = example.truth(meter, of="logged")
+    for day in example.simulated.days:
+        for quantity in ("mass_kg", "base_volume_m3"):
+            stored = example.day(meter, day)[quantity]
+            assert stored == pytest.approx(logged.loc[day, quantity], rel=1e-5, abs=0.0)
+
+
 def test_standard_errors_are_neither_wide_nor_narrow(example):
     """The example's 300-odd deviates have mean 0 and standard deviation 1.
 
     Their standard error is 1/sqrt(n) and 1/sqrt(2n); both are held to 4 of these and to a tenth
     for what the noise's model leaves out (uneven rows, rounding of the barometer).
     """
-    deviates = np.array([z for meter in example.simulated.meters for z in _deviates(example, meter)])
+    deviates = np.array(
+        [z for meter in example.simulated.meters for z in _deviates(example, meter)]
+    )
     count = deviates.size
     print(f"\n{count} meter-days: mean {deviates.mean():+.3f}, deviation {deviates.std():.3f}")
     assert count >= 280
@@ -75,7 +90,7 @@ def test_noise_is_far_below_the_calibration_errors(example):
     for meter in example.simulated.meters:
         truth, noise = example.truth(meter), example.simulated.noise_error(meter)
         flowing = truth["mass_kg"] > 0.0
-        shift = example.truth(meter, calibrated=True)["mass_kg"] - truth["mass_kg"]
+        shift = example.truth(meter, of="shown")["mass_kg"] - truth["mass_kg"]
         outside += bool((shift[flowing].abs() > 4.0 * noise.loc[flowing, "mass_kg"]).mean() > 0.5)
     assert outside >= 6
 
@@ -105,7 +120,7 @@ def _root_bias(span, relative):
     """
     seen, weights, formula = [], [], []
     for meter in span.simulated.meters:
-        truth = span.truth(meter, calibrated=True)["mass_kg"]
+        truth = span.truth(meter, of="shown")["mass_kg"]
         noise = span.simulated.noise_error(meter)
         for day in truth.index[truth > 0.0]:
             error = noise.loc[day, "mass_kg"] / truth[day]
@@ -177,7 +192,7 @@ def test_noise_over_seeds(through, tmp_path, seed):
     print(f"\nseed {seed}: meter, gas days, mean and deviation [standard errors], mean [%], worst")
     for meter in span.simulated.meters:
         deviates = np.array(_deviates(span, meter))
-        truth = span.truth(meter, calibrated=True)["mass_kg"]
+        truth = span.truth(meter, of="shown")["mass_kg"]
         percent = [
             100.0 * (span.day(meter, day)["mass_kg"] / truth[day] - 1.0)
             for day in truth.index[truth > 0.0]

@@ -21,7 +21,7 @@ ELEMENTS = ("C", "H", "N", "O", "S", "He", "Ne", "Ar")
 _COMBUSTION = {"0": 273.15, "15": 288.15, "15.55": 288.70, "20": 293.15, "25": 298.15}
 _METERING = {"0": 273.15, "15": 288.15, "15.55": 288.70, "20": 293.15}
 _SAME_TEMPERATURE = 0.01
-"""Distance [K] up to which a temperature is a tabulated one; 60 degF is 0.0056 K from 15.55 degC."""
+"""Distance [K] up to which a temperature is a tabulated one; 60 degF is 0.006 K from 15.55 degC."""
 
 
 @dataclass(frozen=True, slots=True)

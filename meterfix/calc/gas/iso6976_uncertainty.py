@@ -160,7 +160,8 @@ def _per_heat(powers: _Powers, value: Floats, sums: Sums, table: ComponentTable)
     if powers.heat == 0:
         return np.zeros_like(value)
     if powers.heat < 0:
-        return -value / (sums.net if powers.net else sums.gross)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return -value / (sums.net if powers.net else sums.gross)
     rest = np.ones_like(value)
     for base, exponent in (
         (sums.molar_mass, powers.M),

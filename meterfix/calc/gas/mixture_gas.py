@@ -14,7 +14,7 @@ from meterfix.calc.gas.density_roots import (
 )
 from meterfix.calc.gas.helmholtz import Mixture
 from meterfix.calc.gas.state import GasStates, not_known
-from meterfix.frames import Floats
+from meterfix.frames import Floats, Integers, Truths
 
 _CHUNK = 8192
 """States computed together, so that memory stays bounded; no bit depends on it."""
@@ -69,31 +69,11 @@ class MixtureGas(Generic[AnyMixture]):
         columns = np.full((7, len(p)), np.nan)
         found = np.zeros(len(p), dtype=np.bool_)
         where = np.flatnonzero(usable)
-        for start in range(0, len(where), _CHUNK):
-            part = where[start : start + _CHUNK]
-            roots = (
-                dense_density(self.mixture, p[part], T[part])
-                if dense_root
-                else gas_density(
-                    self.mixture, p[part], T[part], two_roots_below=self._two_roots_below
-                )
-            )
-            there = part[roots.found]
-            if len(there) == 0:
-                continue
-            density = roots.density[roots.found]
-            given = self.mixture.properties(T[there], density)
-            mass = self.mixture.molar_mass
-            # cv <= 0 is no stable state either: the equation is far outside its range there
-            stable = given.isochoric_heat_capacity > 0.0
-            found[there] = stable
-            columns[0, there] = 1e3 * mass * density
-            columns[1, there] = given.compression_factor
-            columns[2, there] = given.isochoric_heat_capacity / mass
-            columns[3, there] = given.isobaric_heat_capacity / mass
-            columns[4, there] = given.isentropic_exponent
-            columns[5, there] = np.sqrt(np.where(stable, given.squared_speed_of_sound, np.nan))
-            columns[6, there] = given.joule_thomson_coefficient
+        # far below its range an equation overflows; what comes of it is NaN, which is no root
+        with np.errstate(over="ignore", invalid="ignore"):
+            for start in range(0, len(where), _CHUNK):
+                part = where[start : start + _CHUNK]
+                self._fill(part, p, T, columns, found, dense_root=dense_root)
         columns[:, ~found] = np.nan
         return GasStates(
             density=columns[0],
@@ -106,6 +86,39 @@ class MixtureGas(Generic[AnyMixture]):
             dynamic_viscosity=np.full(len(p), np.nan),
             no_gas=~found & ~not_known(p, T),
         )
+
+    def _fill(
+        self,
+        part: Integers,
+        p: Floats,
+        T: Floats,
+        columns: Floats,
+        found: Truths,
+        *,
+        dense_root: bool,
+    ) -> None:
+        """Write the properties of some of the states where there is a root."""
+        roots = (
+            dense_density(self.mixture, p[part], T[part])
+            if dense_root
+            else gas_density(self.mixture, p[part], T[part], two_roots_below=self._two_roots_below)
+        )
+        there = part[roots.found]
+        if len(there) == 0:
+            return
+        density = roots.density[roots.found]
+        given = self.mixture.properties(T[there], density)
+        mass = self.mixture.molar_mass
+        # cv <= 0 is no stable state either: the equation is far outside its range there
+        stable = given.isochoric_heat_capacity > 0.0
+        found[there] = stable
+        columns[0, there] = 1e3 * mass * density
+        columns[1, there] = given.compression_factor
+        columns[2, there] = given.isochoric_heat_capacity / mass
+        columns[3, there] = given.isobaric_heat_capacity / mass
+        columns[4, there] = given.isentropic_exponent
+        columns[5, there] = np.sqrt(np.where(stable, given.squared_speed_of_sound, np.nan))
+        columns[6, there] = given.joule_thomson_coefficient
 
     def ideal_isentropic_exponent(self, temperature: Floats) -> Floats:
         """Return cp0/cv0 of the ideal gas at (n,) temperatures [K]."""

@@ -250,7 +250,7 @@ def build_envelope(
     tolerance: Versions[Tolerance] | None = None
     if table.tolerance is not None:
         tolerance = findings.versions((*place, "tolerance"), entries, what="tolerance")
-    if tolerance is None or len(findings.mistakes) > before:
+    if tolerance is None or not table.in_ or not table.out or len(findings.mistakes) > before:
         return None
     asked = set(table.quantities or []) | {"mass"}
     return Envelope(
