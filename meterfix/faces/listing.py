@@ -52,7 +52,7 @@ def _as_table(what: str, opened: OpenSite, asked: Asked, rows: Sequence[Row]) ->
         rows = [{**row, "meter": None, "subject": asked.meter} for row in rows]
     render.print_table(console, what, rows, title, by=by, remarks=shown.remarks(what, rows))
     if what in {"totals", "balances"}:
-        render.print_notes(console, "Not wholly measured", render.gaps(rows), NOTES)
+        render.print_notes(console, "Not wholly measured", render.gaps(rows, by), NOTES)
     if what == "files":
         sources = events.by_source(list(rows))
         if sources:

@@ -102,12 +102,12 @@ def print_text(console: Console, text: str, indent: str = "") -> None:
     console.print(wrapped, markup=False, highlight=False)
 
 
-def gaps(rows: Sequence[Row]) -> list[str]:
+def gaps(rows: Sequence[Row], by: str) -> list[str]:
     """Return why periods of a table are not wholly measured or have no imbalance."""
     notes: dict[str, None] = {}
     for row in rows:
         if row["losses"]:
-            when = row["gas_day"] or row["month"]
+            when = _shown({"hour": "period_start", "month": "month"}.get(by, "gas_day"), row)
             subject = row.get("meter") or row.get("subject") or row["envelope"]
             notes[f"{subject} {when}: {', '.join(row['losses'])}"] = None
     return list(notes)

@@ -83,7 +83,7 @@ def _balances(opened: OpenSite, day: Asked, month: Asked) -> None:
             by=asked.by,
             remarks=shown.remarks("balances", rows),
         )
-        render.print_notes(console, "Without a complete input", render.gaps(rows), NOTES)
+        render.print_notes(console, "Without a complete input", render.gaps(rows, asked.by), NOTES)
 
 
 def _masses(rows: Sequence[Row]) -> list[Row]:
@@ -95,7 +95,7 @@ def _what_to_look_at(opened: OpenSite, month: Asked) -> None:
     console = render.console_for()
     alerts = [row for row in events.alerts(opened, Asked()) if row["until"] is None]
     render.print_table(console, "alerts", alerts, "Open alerts")
-    gaps = render.gaps(shown.totals(opened, month))
+    gaps = render.gaps(shown.totals(opened, month), month.by)
     render.print_notes(console, "Not wholly measured in the month", gaps, NOTES)
     rows = events.files(opened, Asked())
     render.print_notes(console, "Set aside, file and line", render.troubles(rows), NOTES)

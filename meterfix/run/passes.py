@@ -12,6 +12,7 @@ from typing import Any
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.frames import CALCULATION_VERSION
 from meterfix.run import alerts, clock
+from meterfix.run.absent import absence_warning
 from meterfix.run.balances import Balances
 from meterfix.run.book import Book
 from meterfix.run.compute import Key, Report, compute
@@ -132,6 +133,7 @@ class PassWork:
         judged: list[Judged] = []
         deliveries: list[Row] = []
         places: dict[tuple[str, str, str], int] = {}
+        arrived: dict[int, tuple[Arrived, int]] = {}
         for number, (file, (result, after)) in enumerate(zip(files, parsed, strict=True)):
             if number < len(taken.arrived):
                 last += 1
@@ -139,6 +141,7 @@ class PassWork:
                 name = (file.source, file.binding, file.name)
                 replaces = places.get(name, file.replaces)
                 places[name] = sequence
+                arrived[sequence] = (file, replaces)
                 deliveries.append(_delivery_row(file, sequence, replaces, after))
             else:
                 one = again[number - len(taken.arrived)]
@@ -149,6 +152,10 @@ class PassWork:
         old_again = {one.sequence for one in again}
         before = Pool(ledger, ranks_as_of(ledger, index, without=old_again))
         verdicts = judge(judged, index, before, self.opened.site.digest)
+        for fate, one in zip(verdicts.fates, judged, strict=True):
+            if one.sequence in arrived:
+                absent = absence_warning(self.opened, one.sequence, one.parsed, arrived)
+                fate["warning"] = "; ".join(text for text in (fate["warning"], absent) if text)
         fresh = [
             *((row, 1) for row in deliveries),
             *((_known_delivery(ledger, one.sequence), one.judgement) for one in again),

@@ -219,6 +219,10 @@ def _total_columns() -> tuple[SchemaItem, ...]:
         _known_or_not("line_volume_m3"),
         _known_or_not("base_volume_m3"),
         _known_or_not("energy_J"),
+        _known_or_not("mass_expanded_uncertainty_kg"),
+        _known_or_not("base_volume_expanded_uncertainty_m3"),
+        _known_or_not("energy_expanded_uncertainty_J"),
+        Column("uncertainty", _TEXT, nullable=True),
         _known_or_not("base_pressure_Pa"),
         _known_or_not("base_temperature_K"),
         _text("calorific_value_kind", default=""),
@@ -243,6 +247,7 @@ def _hourly_columns() -> tuple[SchemaItem, ...]:
         _integer("columns"),
         _blob("statistics"),
         _blob("sensitivities", nullable=True),
+        _blob("standard_uncertainty", nullable=True),
         Column("parameters", _TEXT, nullable=True),
     )
 
@@ -256,6 +261,8 @@ def _balance_columns() -> tuple[SchemaItem, ...]:
         _known_or_not("vented"),
         _known_or_not("storage_change"),
         _known_or_not("imbalance"),
+        _known_or_not("expanded_uncertainty"),
+        Column("uncertainty", _TEXT, nullable=True),
         _known_or_not("tolerance"),
         _text("beyond_tolerance"),
         _text("significant"),

@@ -195,7 +195,7 @@ def _one_meter(path: Path) -> Folder:
     return folder
 
 
-def hour(number: int, *, rows: int = 11, header: str = "time,dp,p,t") -> str:
+def hour(number: int, *, rows: int = 10, header: str = "time,dp,p,t") -> str:
     """Return a log of one hour of 2026-10-02, a row every 6 minutes."""
     lines = [header]
     for n in range(rows):

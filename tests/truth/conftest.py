@@ -221,7 +221,7 @@ def spring(once) -> Processed:
 
 @pytest.fixture(scope="session")
 def example(once) -> Processed:
-    """The packaged example, as `meterfix demo` lays and processes it."""
+    """Return the packaged example, as `meterfix demo` lays and processes it."""
     now = to_microseconds(datetime.fromisoformat(EXAMPLE_NOW))
     return Processed(
         once("truth-example", lambda to: run_through(lay(to), now)),

@@ -204,7 +204,7 @@ def test_balance_of_the_month_adds_up_its_complete_days(example):
 def test_imbalance_is_the_transmitters_doing(example):
     """Nothing leaks: each imbalance is what the simulator's rates make of the transmitters.
 
-    Calibration errors and noise as they were drawn; within 1e-5 of what flowed in, for the
+    Calibration errors and noise as they were drawn; within 4e-5 of what flowed in, for the
     rounding of the logs.
     """
     judged = 0
@@ -219,7 +219,7 @@ def test_imbalance_is_the_transmitters_doing(example):
                 for sign, meters in ((1.0, balance.inflow), (-1.0, balance.outflow))
                 for meter in meters
             )
-            assert row["imbalance"] == pytest.approx(expected, abs=1e-5 * row["inflow"])
+            assert row["imbalance"] == pytest.approx(expected, abs=4e-5 * row["inflow"])
     assert judged == 3 * 31 - 4
 
 

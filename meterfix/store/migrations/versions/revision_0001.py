@@ -63,8 +63,8 @@ def upgrade() -> None:
     op.create_table(
         "audit",
         *columns(
-            "shard INTEGER, sequence INTEGER, previous_hash TEXT, row_hash TEXT, "
-            "digests TEXT, actor TEXT, clock_us INTEGER, note TEXT"
+            "shard INTEGER, sequence INTEGER, previous_hash TEXT, row_hash TEXT, digests TEXT, "
+            "actor TEXT, clock_us INTEGER, note TEXT"
         ),
         sa.PrimaryKeyConstraint("shard", "sequence", name="pk_audit"),
         sa.CheckConstraint("shard >= 0 AND sequence >= 1", name=op.f("ck_audit_sequence")),
@@ -89,7 +89,7 @@ def upgrade() -> None:
         *columns(
             "meter TEXT, gas_day TEXT, period_start_us INTEGER, hours INTEGER, "
             "columns INTEGER, statistics BLOB, sensitivities BLOB NULL, "
-            "parameters TEXT NULL, pass_sequence INTEGER"
+            "standard_uncertainty BLOB NULL, parameters TEXT NULL, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("meter", "gas_day", name="pk_open_hourly"),
         sqlite_strict=True,
@@ -98,8 +98,8 @@ def upgrade() -> None:
         "pass",
         *columns(
             "sequence INTEGER, id TEXT, kind TEXT, now_us INTEGER, started_us INTEGER, "
-            "finished_us INTEGER, files INTEGER, readings INTEGER, days INTEGER, "
-            "note TEXT, pass_sequence INTEGER"
+            "finished_us INTEGER, files INTEGER, readings INTEGER, days INTEGER, note TEXT, "
+            "pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("sequence", name="pk_pass"),
         sa.CheckConstraint("kind IN ('pass', 'restore', 'resolution')", name=op.f("ck_pass_kind")),
@@ -164,8 +164,8 @@ def upgrade() -> None:
     op.create_table(
         "conflict",
         *columns(
-            "signal TEXT, instant_us INTEGER, decision INTEGER, candidates TEXT, "
-            "chosen REAL, rule TEXT, pass_sequence INTEGER"
+            "signal TEXT, instant_us INTEGER, decision INTEGER, candidates TEXT, chosen REAL, "
+            "rule TEXT, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("signal", "instant_us", "decision", name="pk_conflict"),
         sa.ForeignKeyConstraint(
@@ -179,7 +179,7 @@ def upgrade() -> None:
         *columns(
             "meter TEXT, gas_day TEXT, revision INTEGER, period_start_us INTEGER, "
             "hours INTEGER, columns INTEGER, statistics BLOB, sensitivities BLOB NULL, "
-            "parameters TEXT NULL, pass_sequence INTEGER"
+            "standard_uncertainty BLOB NULL, parameters TEXT NULL, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("meter", "gas_day", "revision", name="pk_hourly_record"),
         sa.CheckConstraint("revision >= 1", name=op.f("ck_hourly_record_revision")),
@@ -233,11 +233,10 @@ def upgrade() -> None:
     op.create_table(
         "alert_event",
         *columns(
-            "alert_id TEXT, number INTEGER, state TEXT, until_us INTEGER NULL, "
-            "severity TEXT, message TEXT, evidence TEXT, "
-            "effect_base_volume_m3_per_day REAL NULL, effect_energy_J_per_day REAL NULL, "
-            "effect_money_per_day REAL NULL, currency TEXT, input_digest TEXT, "
-            "pass_sequence INTEGER"
+            "alert_id TEXT, number INTEGER, state TEXT, until_us INTEGER NULL, severity TEXT, "
+            "message TEXT, evidence TEXT, effect_base_volume_m3_per_day REAL NULL, "
+            "effect_energy_J_per_day REAL NULL, effect_money_per_day REAL NULL, currency TEXT, "
+            "input_digest TEXT, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("alert_id", "number", name="pk_alert_event"),
         sa.CheckConstraint(
@@ -256,10 +255,11 @@ def upgrade() -> None:
             "envelope TEXT, kind TEXT, period_start_us INTEGER, quantity TEXT, basis TEXT, "
             "revision INTEGER, period_end_us INTEGER, gas_day TEXT, inflow REAL NULL, "
             "outflow REAL NULL, vented REAL NULL, storage_change REAL NULL, "
-            "imbalance REAL NULL, tolerance REAL NULL, beyond_tolerance TEXT, "
-            "significant TEXT, measured_fraction REAL, reason TEXT, hourly BLOB NULL, "
-            "links TEXT, as_of_pass INTEGER, site_digest TEXT, calculation_version TEXT, "
-            "fingerprint TEXT, revision_reason TEXT, pass_sequence INTEGER"
+            "imbalance REAL NULL, expanded_uncertainty REAL NULL, uncertainty TEXT NULL, "
+            "tolerance REAL NULL, beyond_tolerance TEXT, significant TEXT, "
+            "measured_fraction REAL, reason TEXT, hourly BLOB NULL, links TEXT, "
+            "as_of_pass INTEGER, site_digest TEXT, calculation_version TEXT, fingerprint TEXT, "
+            "revision_reason TEXT, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint(
             "envelope",
@@ -303,8 +303,7 @@ def upgrade() -> None:
             "sequence INTEGER, source TEXT, binding TEXT, name TEXT, version INTEGER, "
             "raw_sha256 TEXT, kind TEXT, byte_offset INTEGER, line_offset INTEGER, "
             "prefix_sha256 TEXT, file_sha256 TEXT, file_length INTEGER, carried TEXT, "
-            "arrival_us INTEGER, modified_us INTEGER, replaces INTEGER, "
-            "pass_sequence INTEGER"
+            "arrival_us INTEGER, modified_us INTEGER, replaces INTEGER, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("sequence", name="pk_delivery"),
         sa.CheckConstraint("kind IN ('whole', 'tail', 'restart')", name=op.f("ck_delivery_kind")),
@@ -331,10 +330,10 @@ def upgrade() -> None:
             "envelope TEXT, kind TEXT, period_start_us INTEGER, quantity TEXT, "
             "period_end_us INTEGER, gas_day TEXT, inflow REAL NULL, outflow REAL NULL, "
             "vented REAL NULL, storage_change REAL NULL, imbalance REAL NULL, "
-            "tolerance REAL NULL, beyond_tolerance TEXT, significant TEXT, "
-            "measured_fraction REAL, reason TEXT, hourly BLOB NULL, links TEXT, "
-            "as_of_pass INTEGER, site_digest TEXT, calculation_version TEXT, "
-            "fingerprint TEXT, pass_sequence INTEGER"
+            "expanded_uncertainty REAL NULL, uncertainty TEXT NULL, tolerance REAL NULL, "
+            "beyond_tolerance TEXT, significant TEXT, measured_fraction REAL, reason TEXT, "
+            "hourly BLOB NULL, links TEXT, as_of_pass INTEGER, site_digest TEXT, "
+            "calculation_version TEXT, fingerprint TEXT, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint(
             "envelope", "kind", "period_start_us", "quantity", name="pk_open_balance"
@@ -360,11 +359,13 @@ def upgrade() -> None:
             "meter TEXT, kind TEXT, period_start_us INTEGER, period_end_us INTEGER, "
             "gas_day TEXT, duration_s REAL, measured_time_s REAL, flow_time_s REAL, "
             "mass_kg REAL NULL, line_volume_m3 REAL NULL, base_volume_m3 REAL NULL, "
-            "energy_J REAL NULL, base_pressure_Pa REAL NULL, base_temperature_K REAL NULL, "
+            "energy_J REAL NULL, mass_expanded_uncertainty_kg REAL NULL, "
+            "base_volume_expanded_uncertainty_m3 REAL NULL, "
+            "energy_expanded_uncertainty_J REAL NULL, uncertainty TEXT NULL, "
+            "base_pressure_Pa REAL NULL, base_temperature_K REAL NULL, "
             "calorific_value_kind TEXT, measured_fraction REAL, flags TEXT, missing TEXT, "
-            "input_digest TEXT, as_of_delivery INTEGER, as_of_pass INTEGER, "
-            "site_digest TEXT, calculation_version TEXT, fingerprint TEXT, "
-            "pass_sequence INTEGER"
+            "input_digest TEXT, as_of_delivery INTEGER, as_of_pass INTEGER, site_digest TEXT, "
+            "calculation_version TEXT, fingerprint TEXT, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint("meter", "kind", "period_start_us", name="pk_open_total"),
         sa.CheckConstraint("kind IN ('gas_day', 'month')", name=op.f("ck_open_total_kind")),
@@ -380,10 +381,13 @@ def upgrade() -> None:
             "meter TEXT, kind TEXT, period_start_us INTEGER, basis TEXT, revision INTEGER, "
             "period_end_us INTEGER, gas_day TEXT, duration_s REAL, measured_time_s REAL, "
             "flow_time_s REAL, mass_kg REAL NULL, line_volume_m3 REAL NULL, "
-            "base_volume_m3 REAL NULL, energy_J REAL NULL, base_pressure_Pa REAL NULL, "
-            "base_temperature_K REAL NULL, calorific_value_kind TEXT, "
-            "measured_fraction REAL, flags TEXT, missing TEXT, input_digest TEXT, "
-            "as_of_delivery INTEGER, as_of_pass INTEGER, site_digest TEXT, "
+            "base_volume_m3 REAL NULL, energy_J REAL NULL, "
+            "mass_expanded_uncertainty_kg REAL NULL, "
+            "base_volume_expanded_uncertainty_m3 REAL NULL, "
+            "energy_expanded_uncertainty_J REAL NULL, uncertainty TEXT NULL, "
+            "base_pressure_Pa REAL NULL, base_temperature_K REAL NULL, "
+            "calorific_value_kind TEXT, measured_fraction REAL, flags TEXT, missing TEXT, "
+            "input_digest TEXT, as_of_delivery INTEGER, as_of_pass INTEGER, site_digest TEXT, "
             "calculation_version TEXT, fingerprint TEXT, reason TEXT, pass_sequence INTEGER"
         ),
         sa.PrimaryKeyConstraint(
