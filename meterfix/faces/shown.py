@@ -212,7 +212,7 @@ def _balance_hours(row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
                 {
                     "input": by_hour[number] if by_hour else "",
                     "storage_change": reasons.get("storage_change", ""),
-                    "significant": reasons.get("hours", ""),
+                    "significant": reasons.get("significant", ""),
                     "beyond_tolerance": reasons.get("hours", ""),
                 }
             ),

@@ -11,7 +11,6 @@ from meterfix.run.gather import Arrived, arrived_from, parse_arrived
 from meterfix.run.opening import OpenSite
 from meterfix.run.rejudge import read_raw, state_before
 
-
 Fresh = Mapping[int, tuple[Arrived, int]]
 """Deliveries of the pass under way, each with the delivery that it replaces (0 for none)."""
 
@@ -37,7 +36,8 @@ def absence_warning(opened: OpenSite, sequence: int, parsed: ParsedFile, fresh: 
 
 def _absent(opened: OpenSite, parsed: ParsedFile, replaces: int, fresh: Fresh) -> int:
     """Return how many readings of the version before have no cell in the new one."""
-    old = _instants([result for result, _ in parse_arrived(_chain(opened, replaces, fresh), opened)])
+    before = parse_arrived(_chain(opened, replaces, fresh), opened)
+    old = _instants([result for result, _ in before])
     new = _instants([parsed])
     nothing = np.zeros(0, dtype=np.int64)
     return sum(

@@ -38,6 +38,8 @@ from meterfix.store.fingerprint import fingerprint
 from meterfix.store.ledger import Ledger, PassRecord
 
 ACTOR = "meterfix"
+NAMED_AT_CLOSE = 3
+"""Waiting files that the reason of a close names; of more it gives the number."""
 _ATTEMPT = ("source", "binding", "name", "raw_sha256")
 
 
@@ -100,7 +102,7 @@ class PassWork:
             pool,
             book,
             may_close=not more and not behind,
-            waiting=len(taken.waiting),
+            waiting=taken.waiting,
             site_changed=site_changed,
             last_delivery=ranked,
         )
@@ -152,9 +154,9 @@ class PassWork:
         old_again = {one.sequence for one in again}
         before = Pool(ledger, ranks_as_of(ledger, index, without=old_again))
         verdicts = judge(judged, index, before, self.opened.site.digest)
-        for fate, one in zip(verdicts.fates, judged, strict=True):
-            if one.sequence in arrived:
-                absent = absence_warning(self.opened, one.sequence, one.parsed, arrived)
+        for fate, file_read in zip(verdicts.fates, judged, strict=True):
+            if file_read.sequence in arrived:
+                absent = absence_warning(self.opened, file_read.sequence, file_read.parsed, arrived)
                 fate["warning"] = "; ".join(text for text in (fate["warning"], absent) if text)
         fresh = [
             *((row, 1) for row in deliveries),
@@ -241,7 +243,7 @@ class PassWork:
             pool,
             book,
             may_close=False,
-            waiting=0,
+            waiting=(),
             site_changed=False,
             last_delivery=ranked,
         )
@@ -282,7 +284,7 @@ class PassWork:
         book: Book,
         *,
         may_close: bool,
-        waiting: int,
+        waiting: Sequence[Row],
         site_changed: bool,
         last_delivery: int,
     ) -> Settled:
@@ -294,7 +296,7 @@ class PassWork:
             if key not in forced
         }
         computed = compute(index, pool, wanted, known, self.gases, self.report)
-        held = f"; {waiting} file(s) wait" if waiting else ""
+        held = _held_text(waiting)
         settling = Settling(
             index=index,
             ledger=ledger,
@@ -494,6 +496,15 @@ def _delivery_row(file: Arrived, sequence: int, replaces: int, after: Mapping[st
 
 def _waiting_key(row: Mapping[str, Any]) -> tuple[str, str, str]:
     return (row["source"], row["binding"], row["name"])
+
+
+def _held_text(waiting: Sequence[Row]) -> str:
+    """Return what a close says of files that waited when it was due; '' if none did."""
+    if not waiting:
+        return ""
+    named = [f"{row['source']}: {row['name'] or 'its folder'}" for row in waiting[:NAMED_AT_CLOSE]]
+    more = len(waiting) - len(named)
+    return f"; without {', '.join(named)}" + (f" and {more} more" if more else "")
 
 
 def _waiting_text(taken: Slice) -> tuple[str, ...]:

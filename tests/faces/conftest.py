@@ -148,7 +148,9 @@ class Folder:
 
     def json(self, what: str, *options: str) -> list[dict]:
         """Return what `show WHAT --format json` prints."""
-        return json.loads(run("show", what, "--site", self.site, *options, "--format", "json").stdout)
+        return json.loads(
+            run("show", what, "--site", self.site, *options, "--format", "json").stdout
+        )
 
     def text(self, what: str, *options: str) -> str:
         return run("show", what, "--site", self.site, *options).stdout
@@ -162,7 +164,7 @@ def invoke():
 
 @pytest.fixture(scope="session")
 def works(tmp_path_factory) -> Folder:
-    """Three gas days of the simulated works, processed; not to be changed."""
+    """Process three gas days of the simulated works; not to be changed."""
     folder = Folder(tmp_path_factory.mktemp("works"))
     simulate(seed=11, days=3).write(folder.path)
     folder.process()
@@ -171,20 +173,20 @@ def works(tmp_path_factory) -> Folder:
 
 @pytest.fixture
 def own_works(works, tmp_path) -> Folder:
-    """A copy of the processed works that a test may change."""
+    """Return a copy of the processed works that a test may change."""
     shutil.copytree(works.path, tmp_path / "works", symlinks=True)
     return Folder(tmp_path / "works")
 
 
 @pytest.fixture
 def one_meter(tmp_path) -> Folder:
-    """A site with one meter on air, without logs."""
+    """Return a site with one meter on air, without logs."""
     return _one_meter(tmp_path / "one")
 
 
 @pytest.fixture(scope="session")
 def new_one_meter(tmp_path_factory):
-    """A function that makes a one-meter site in a folder of its own."""
+    """Return a function that makes a one-meter site in a folder of its own."""
     return lambda: _one_meter(tmp_path_factory.mktemp("site") / "one")
 
 
@@ -200,7 +202,9 @@ def hour(number: int, *, rows: int = 10, header: str = "time,dp,p,t") -> str:
     lines = [header]
     for n in range(rows):
         minute = number * 60 + 6 * n
-        lines.append(f"2026-10-02T{minute // 60:02d}:{minute % 60:02d}:00Z,{100 + n},5.0,{20 + n / 10}")
+        lines.append(
+            f"2026-10-02T{minute // 60:02d}:{minute % 60:02d}:00Z,{100 + n},5.0,{20 + n / 10}"
+        )
     return "\n".join(lines) + "\n"
 
 

@@ -51,9 +51,7 @@ def test_help_loads_nothing_heavy():
         "         'alembic', 'rich'} & set(sys.modules)\n"
         "sys.exit(f'loaded: {sorted(heavy)}' if heavy else 0)\n"
     )
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=False
-    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
     assert done.returncode == 0, done.stderr
 
 
@@ -65,9 +63,7 @@ def test_the_schema_is_a_json_schema_and_loads_no_gas_model():
         "try:\n    main(['check', '--schema'])\nexcept SystemExit as end:\n    assert not end.code\n"
         "assert not {'CoolProp', 'numpy', 'sqlalchemy'} & set(sys.modules)\n"
     )
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=False
-    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
     assert done.returncode == 0, done.stderr
     schema = json.loads(done.stdout)
     assert schema["$schema"] == "https://json-schema.org/draft/2020-12/schema"
@@ -139,12 +135,13 @@ def test_verify_before_the_first_process(one_meter, invoke):
 
 
 def test_process_without_logs(one_meter, invoke):
-    """A site without logs is no failure: nothing is new, and every view is empty."""
+    """A site without logs is no failure: its site file is recorded, and every view is empty."""
+    assert "0 file(s), 0 new readings" in one_meter.process().stdout
     assert "nothing new" in one_meter.process().stdout
     for what in ("totals", "balances", "alerts", "files"):
         assert one_meter.json(what) == []
         assert "nothing to show" in one_meter.text(what)
-    assert [row["kind"] for row in one_meter.json("passes")] == ["heartbeat"]
+    assert [row["kind"] for row in one_meter.json("passes")] == ["pass", "heartbeat"]
 
 
 def test_a_busy_ledger_is_exit_2(own_works):
@@ -162,7 +159,7 @@ def test_a_busy_ledger_is_exit_2(own_works):
         lock.release()
 
 
-def test_process_as_json(own_works, hour_log, invoke):
+def test_process_as_json(own_works, invoke):
     """`process --format json` says what the passes did; a second run finds nothing new."""
     arguments = ("process", "--site", own_works.site, "--now", "2026-10-05T09:00:00+02:00")
     done = json.loads(invoke(*arguments, "--format", "json").stdout)

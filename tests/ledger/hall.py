@@ -232,9 +232,25 @@ def open_alerts(ledger: Any) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def differences(one: Mapping[str, Any], other: Mapping[str, Any]) -> list[str]:
-    """Return the names of what differs."""
-    return sorted(k for k in {*one, *other} if one.get(k) != other.get(k))
+def differences(
+    one: Mapping[str, Any], other: Mapping[str, Any], *, inputs: bool = True
+) -> list[str]:
+    """Return the names of what differs, with the columns where they are rows.
+
+    With `inputs` false, digests of inputs may differ: a closed day that later readings touch
+    without changing one bit of its figures gets no revision, and so keeps the digest of the
+    inputs that it was computed from.
+    """
+    found = []
+    for name in sorted({*one, *other}):
+        a, b = one.get(name), other.get(name)
+        if a == b:
+            continue
+        columns = [c for c in a if a[c] != b[c]] if isinstance(a, dict) and b else []
+        if columns == ["input_digest"] and not inputs:
+            continue
+        found.append(f"{name}: {', '.join(columns)}" if columns else name)
+    return found
 
 
 def sums(site: Path) -> dict[str, int]:

@@ -58,14 +58,19 @@ def test_example_is_within_four_standard_errors(example, meter):
 def test_noise_is_all_that_there_is_between_them(example, meter):
     """From the very values logged, noise and all, the simulator's rates give the stored totals.
 
-    What is left is the rounding to the loggers' decimals and the barometer's noise. (A dp of
-    3 mbar in steps of 0.01 mbar: 5e-4 of a rate, 1.3e-5 of the gas day's 1,440; times 3.)
+    What is left, the rounding to the loggers' decimals and the barometer's noise, is under half
+    a standard error of the noise, and most of it far less.
     """
     logged = example.truth(meter, of="logged")
+    noise = example.simulated.noise_error(meter)
+    left = []
     for day in example.simulated.days:
         for quantity in ("mass_kg", "base_volume_m3"):
-            stored = example.day(meter, day)[quantity]
-            assert stored == pytest.approx(logged.loc[day, quantity], rel=4e-5, abs=0.0)
+            difference = abs(example.day(meter, day)[quantity] - logged.loc[day, quantity])
+            assert difference <= 0.5 * noise.loc[day, quantity], day
+            if difference > 0.0:
+                left.append(difference / noise.loc[day, quantity])
+    assert np.median(left) < 0.1
 
 
 def test_standard_errors_are_neither_wide_nor_narrow(example):

@@ -18,6 +18,8 @@ from meterfix.demo.simulator import simulate
 from meterfix.demo.works import BALANCES
 
 BAR = 1e-6
+REACHED = 1e-8
+"""What October reaches with room to spare; a wrong coefficient may hide below 1e-6, not here."""
 
 
 def _differences(span, meter):
@@ -38,13 +40,13 @@ def _differences(span, meter):
 def test_gas_days_agree_with_the_truth(exact, meter):
     """Mass and base volume of every gas day of October: within 1e-6, exactly 0 where it is 0.
 
-    The month holds the clock change, a change of composition, a plate exchange, an isolation,
-    gaps, lost rows and cells, and rows stamped off the grid.
+    (Held to 1e-8, which it reaches.) The month holds the clock change, a change of composition,
+    a plate exchange, an isolation, gaps, lost rows and cells, and rows stamped off the grid.
     """
     differences = _differences(exact, meter)
     print(f"\n{meter}: worst relative difference {max(differences):.1e}", end="")
     assert len(differences) >= 2 * 20
-    assert max(differences) <= BAR
+    assert max(differences) <= REACHED < BAR
 
 
 def test_gas_days_without_flow_are_exactly_zero(exact):

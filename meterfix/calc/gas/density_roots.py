@@ -31,6 +31,8 @@ _STEP = 0.05
 """Largest step of the walk in reduced density."""
 _HIGHEST = 4.0
 """Reduced density beyond which no root is sought: denser than any liquid of the components."""
+_SCANNED = 16
+"""Isotherms scanned together; no bit depends on it."""
 _ITERATIONS = 200
 _CONVERGED = 1e-11
 """Relative Newton step after which the (quadratically convergent) result is frozen."""
@@ -108,13 +110,19 @@ def mechanical_critical_temperature(mixture: Mixture) -> float:
     the step above the last falling isotherm is returned, so the result is safe, not exact.
     """
     reduced = np.arange(0.04, 3.0, 0.04)
+    temperatures: list[float] = []
     temperature = 3.0 * mixture.temperature_scale
     while temperature > 0.4 * mixture.temperature_scale:
-        T = np.full(len(reduced), temperature)
-        _, slope = mixture.isotherms(T).pressure_terms(reduced / mixture.size_cubed)
-        if not (slope > 0.0).all():
-            return temperature * 1.01
+        temperatures.append(temperature)
         temperature /= 1.01
+    for start in range(0, len(temperatures), _SCANNED):
+        block = temperatures[start : start + _SCANNED]
+        T = np.repeat(block, len(reduced))
+        D = np.tile(reduced / mixture.size_cubed, len(block))
+        _, slope = mixture.isotherms(T).pressure_terms(D)
+        rises = (slope > 0.0).reshape(len(block), len(reduced)).all(axis=1)
+        if not rises.all():
+            return block[int(np.argmin(rises))] * 1.01
     return 0.0
 
 

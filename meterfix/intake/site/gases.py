@@ -187,12 +187,12 @@ def _terms(
             findings.add(
                 at,
                 f"'reference_equation' for a mixture of {len(composition.fractions)} components",
-                "it is for one pure gas or for air; use 'aga8_detail' for a mixture",
+                "it is for one pure gas or for air; use 'aga8_detail' or 'gerg_2008' for a mixture",
             )
-        if model.model is StateModel.AGA8_DETAIL and air:
+        if model.model in {StateModel.AGA8_DETAIL, StateModel.GERG_2008} and air:
             findings.add(
                 at,
-                "'aga8_detail' for air",
+                f"'{model.model.value}' for air",
                 "use 'reference_equation', or give nitrogen, oxygen and argon",
             )
     viscosity = _viscosity(*methods["dynamic_viscosity"], mixture=mixture, findings=findings)

@@ -151,7 +151,7 @@ class FixedFactorTable(Table):
 
 
 Model = Annotated[
-    Annotated[Literal["aga8_detail", "reference_equation", "ideal"], Tag(TEXT)]
+    Annotated[Literal["aga8_detail", "gerg_2008", "reference_equation", "ideal"], Tag(TEXT)]
     | Annotated[FixedFactorTable, Tag(TABLE)],
     Discriminator(text_or_table),
 ]

@@ -117,9 +117,9 @@ def test_vanishing_pressure_is_the_ideal_gas(share, other, temperature):
     gas = DetailGas((("methane", 1.0 - share), (other, share)))
     T = np.array([temperature])
     states = gas.states(np.array([1.0]), T)
-    assert states.compression_factor[0] == pytest.approx(1.0, abs=1e-7)
+    assert states.compression_factor[0] == pytest.approx(1.0, abs=5e-7)
     ideal = gas.ideal_isentropic_exponent(T)[0]
-    assert states.isentropic_exponent[0] == pytest.approx(ideal, abs=1e-6)
+    assert states.isentropic_exponent[0] == pytest.approx(ideal, abs=2e-6)
     # w^2 = kappa R T / M of an ideal gas
     w2 = ideal * gas.gas_constant * temperature / gas.molar_mass
     assert states.speed_of_sound[0] ** 2 == pytest.approx(w2, rel=1e-6)

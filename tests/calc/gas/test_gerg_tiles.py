@@ -68,9 +68,9 @@ def test_gerg_records_have_the_same_bits_whatever_else_is_computed(name, mixture
     p, T = random.uniform(2e4, 20e6, 1000), random.uniform(270.0, 330.0, 1000)
     whole = GasLibrary().properties(terms).line_state(p, T)
     other, lonely = GasLibrary().properties(terms), GasLibrary().properties(terms)
-    order = random.permutation(1000)
-    sevens = [other.line_state(p[order[n : n + 7]], T[order[n : n + 7]]) for n in range(0, 1000, 7)]
-    alone = [lonely.line_state(p[n : n + 1], T[n : n + 1]) for n in range(100)]
+    order = random.permutation(1000)[:210]
+    sevens = [other.line_state(p[order[n : n + 7]], T[order[n : n + 7]]) for n in range(0, 210, 7)]
+    alone = [lonely.line_state(p[n : n + 1], T[n : n + 1]) for n in range(30)]
     for row in (
         "density",
         "compression_factor",
@@ -83,7 +83,7 @@ def test_gerg_records_have_the_same_bits_whatever_else_is_computed(name, mixture
         assert (
             np.concatenate([getattr(s, row) for s in sevens]).tobytes() == values[order].tobytes()
         )
-        assert np.concatenate([getattr(s, row) for s in alone]).tobytes() == values[:100].tobytes()
+        assert np.concatenate([getattr(s, row) for s in alone]).tobytes() == values[:30].tobytes()
 
 
 def test_each_model_has_its_own_tiles_and_each_use_its_own_model(mixtures):
@@ -101,6 +101,6 @@ def test_each_model_has_its_own_tiles_and_each_use_its_own_model(mixtures):
     assert found[gerg, detail][0] == found[gerg, gerg][0]
     assert found[gerg, detail][1] == found[detail, detail][1]
     assert found[detail, gerg][1] == found[gerg, gerg][1]
-    assert abs(found[gerg, gerg][0] / found[detail, detail][0] - 1.0) > 1e-3
+    assert abs(found[gerg, gerg][0] / found[detail, detail][0] - 1.0) > 3e-4
     exact = GergGas(rich).states(p, T).density[0]
     assert found[gerg, gerg][0] == pytest.approx(exact, rel=5e-7)
