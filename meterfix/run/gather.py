@@ -80,9 +80,13 @@ class Arrived:
             "carried": dict(self.carried),
         }
 
-    def entry(self, *, with_bytes: bool) -> PackEntry:
-        """Return the archive's entry; without bytes where it holds them already."""
-        return PackEntry(self.raw_sha256, self.raw if with_bytes else None, self.meta())
+    def entry(self, sequence: int, *, with_bytes: bool) -> PackEntry:
+        """Return the archive's entry; without bytes where it holds them already.
+
+        The delivery's number stands with it, so that what is adopted keeps its order.
+        """
+        content = self.raw if with_bytes else None
+        return PackEntry(self.raw_sha256, content, {**self.meta(), "sequence": sequence})
 
 
 @dataclass

@@ -341,7 +341,10 @@ class PassWork:
         sequence = ledger.head().sequence + 1
         fresh_raw = {row["sha256"] for row in rows["raw_object"]}
         locations = ledger.archive.write_pack(
-            [file.entry(with_bytes=file.raw_sha256 in fresh_raw) for file in taken.arrived]
+            [
+                file.entry(row["sequence"], with_bytes=file.raw_sha256 in fresh_raw)
+                for file, row in zip(taken.arrived, rows["delivery"], strict=True)
+            ]
         )
         replace = {**settled.replace, "raw_location": locations, "seen": taken.seen}
         replace.update(self._store_readings(sequence, verdicts))

@@ -40,10 +40,13 @@ def unknown_entries(
 
 
 def _arrival(pack: str, index: list[IndexEntry]) -> tuple[int, int, str]:
-    """Order of packs: by arrival, then by the sequence that their deliveries had."""
+    """Order of packs: by the sequence that their deliveries had, then by arrival.
+
+    Many passes can share one arrival, and a clock can jump back between two.
+    """
     arrivals = [int(entry.meta.get("arrival_us", 0)) for entry in index]
     sequences = [int(entry.meta.get("sequence", 0)) for entry in index]
-    return (min(arrivals, default=0), min(sequences, default=0), pack)
+    return (min(sequences, default=0), min(arrivals, default=0), pack)
 
 
 def known_identities(connection: Connection, hashes: Iterable[str]) -> set[Identity]:

@@ -60,7 +60,8 @@ def test_the_schema_is_a_json_schema_and_loads_no_gas_model():
     code = (
         "import sys\n"
         "from meterfix.faces.commands import main\n"
-        "try:\n    main(['check', '--schema'])\nexcept SystemExit as end:\n    assert not end.code\n"
+        "try:\n    main(['check', '--schema'])\n"
+        "except SystemExit as end:\n    assert not end.code\n"
         "assert not {'CoolProp', 'numpy', 'sqlalchemy'} & set(sys.modules)\n"
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)

@@ -19,7 +19,7 @@ def die(*_args, **_more):
 
 
 def at_pack_write():
-    """Half of the pack's bytes are in its unfinished file."""
+    """Die when half of the pack's bytes are in its unfinished file."""
     real = Path.open
 
     class Half:
@@ -45,7 +45,7 @@ def at_pack_write():
 
 
 def at_pack_renamed():
-    """The pack has its name; nothing else has happened."""
+    """Die when the pack has its name and nothing else has happened."""
     real = Path.replace
 
     def renamed(path, target):
@@ -58,7 +58,7 @@ def at_pack_renamed():
 
 
 def at_mid_transaction():
-    """Some tables of the pass are written, the transaction is open."""
+    """Die when some tables of the pass are written and the transaction is open."""
     real = writing.insert_rows
 
     def inserted(connection, name, rows):
@@ -70,7 +70,7 @@ def at_mid_transaction():
 
 
 def at_before_done():
-    """COMMIT has returned; the anchor does not say so yet."""
+    """Die when COMMIT has returned and the anchor does not say so yet."""
     real = Anchor.append
 
     def appended(anchor, *lines):

@@ -13,7 +13,7 @@ import pytest
 
 @pytest.fixture(scope="session")
 def hall() -> ModuleType:
-    """The module `hall.py`."""
+    """Load the module `hall.py`."""
     name = "meterfix_ledger_hall"
     if name not in sys.modules:
         spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name("hall.py"))
@@ -27,7 +27,7 @@ def hall() -> ModuleType:
 
 @pytest.fixture(scope="session")
 def flawed_day(hall, tmp_path_factory) -> Path:
-    """One day of the hall with malformed lines, laid and never processed: to be copied."""
+    """Lay one day of the hall with malformed lines, never processed: to be copied."""
     site = hall.new_site(tmp_path_factory.mktemp("flawed") / "site", hall.hall_text(packed=True))
     for name, content in hall.flawed_logs(1).items():
         hall.lay(site.parent / "logs" / name, content)
@@ -36,7 +36,7 @@ def flawed_day(hall, tmp_path_factory) -> Path:
 
 @pytest.fixture(scope="session")
 def undisturbed(hall, flawed_day, tmp_path_factory) -> Path:
-    """The same day, processed in one go and never disturbed: to be read only."""
+    """Process the same day in one go, undisturbed: to be read only."""
     site = copied(flawed_day, tmp_path_factory.mktemp("undisturbed"))
     hall.run(site)
     return site
@@ -50,7 +50,7 @@ def copied(site: Path, folder: Path) -> Path:
 
 @pytest.fixture
 def copy_of(tmp_path):
-    """A function that copies a site into this test's folder."""
+    """Return a function that copies a site into this test's folder."""
 
     def copy(site: Path, name: str = "copy") -> Path:
         return copied(site, tmp_path / name)

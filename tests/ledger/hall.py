@@ -123,9 +123,10 @@ def split_text() -> str:
     for block in re.split(r"(?m)^(?=\[)", hall_text()):
         head = block.split("\n", 1)[0]
         if head.startswith("[source.works]"):
-            for part in ("works_dp", "works_pt"):
-                blocks.append(block.replace("source.works", f"source.{part}")
-                              .replace("logs/works", f"logs/{part}"))  # fmt: skip
+            blocks += [
+                block.replace("source.works", f"source.{part}").replace("/works", f"/{part}")
+                for part in ("works_dp", "works_pt")
+            ]
         elif head.startswith("[source.works.column.dp]"):
             blocks.append(block.replace("source.works.", "source.works_dp."))
         elif head.startswith("[source.works.column."):
@@ -194,9 +195,7 @@ def figures(site: Path) -> dict[str, Any]:
                 found[f"{name} {part}"] = getattr(readings, part).tobytes()
         totals = _standing(ledger, "total", ("meter", "kind", "period_start_us"))
         found.update({f"total {key}": row for key, row in totals.items()})
-        balances = _standing(
-            ledger, "balance", ("envelope", "kind", "period_start_us", "quantity")
-        )
+        balances = _standing(ledger, "balance", ("envelope", "kind", "period_start_us", "quantity"))
         found.update({f"balance {key}": row for key, row in balances.items()})
         hours = {(r["meter"], r["gas_day"]): r for r in ledger.rows("open_hourly")}
         for row in ledger.latest("hourly_record", group=("meter", "gas_day"), number="revision"):
@@ -270,8 +269,10 @@ def everything(site: Path) -> dict[str, Any]:
     """Return every table but the heartbeat, and every file of the archive, lock excepted."""
     found: dict[str, Any] = {}
     with sqlite3.connect(f"file:{site.parent / 'meterfix.sqlite'}?mode=ro", uri=True) as database:
-        names = [row[0] for row in
-                 database.execute("SELECT name FROM sqlite_schema WHERE type = 'table'")]
+        names = [
+            row[0]
+            for row in database.execute("SELECT name FROM sqlite_schema WHERE type = 'table'")
+        ]
         for name in names:
             if name != "heartbeat":
                 found[f"table {name}"] = sorted(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import shutil
 from pathlib import Path
 
@@ -87,9 +88,9 @@ def test_late_file_makes_a_revision_of_day_and_month(hall, site, logs, tmp_path)
     assert masses[2] > 1.5 * masses[1] > 0.0
     balances = [row for row in hall.rows(site, "balance_revision") if row["kind"] == "gas_day"]
     assert {row["revision"] for row in balances} == {1, 2}
-    assert {
-        row["revision_reason"] for row in balances if row["revision"] == 2
-    } == {"later readings"}
+    assert {row["revision_reason"] for row in balances if row["revision"] == 2} == {
+        "later readings"
+    }
     assert len(hall.rows(site, "period_event", subject="meter FT-301")) == 2
     assert not hall.prove(site).findings
     # the bits are those of a site that got all in time
@@ -145,13 +146,12 @@ def test_nothing_closes_while_a_readable_file_waits_for_its_turn(hall, site, log
 
 def test_file_that_is_still_written_holds_no_close_and_is_named(hall, site, logs):
     """A growing file delays nothing beyond the deadline; the close says that it was waiting."""
-    import os
-    import time
-
     hall.put_all(site, logs)
     growing = site.parent / "logs" / "works" / "FT-301_2026-10-02.csv"
     hall.lay(growing, b"time,dp,p,t\n2026-10-02T0")
-    os.utime(growing, (time.time() + 60, time.time() + 60))
+    growing.touch()
+    soon = growing.stat().st_mtime + 60.0
+    os.utime(growing, (soon, soon))
     done = hall.run(site, DEADLINE)
     assert any("FT-301_2026-10-02.csv" in text for text in done.waiting)
     assert stages(hall, site) == all_at(hall, 1, 0)

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-import random
 import re
 from itertools import pairwise
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 BEFORE = "2026-10-05T12:00:00Z"
@@ -35,7 +35,7 @@ def logs(hall):
 
 @pytest.fixture(scope="module")
 def slices(logs):
-    """Three sets of recorders' rows: cut inside an hour, at midnight, between pressure and dp."""
+    """Cut the recorders' rows in three: inside an hour, at midnight, between pressure and dp."""
     return [
         [
             log.between(*list(pairwise(CUTS["dp" if log.source.endswith("dp") else "other"]))[n])
@@ -47,7 +47,7 @@ def slices(logs):
 
 @pytest.fixture(scope="module")
 def at_once(hall, logs, tmp_path_factory):
-    """What the ledger says if every recorder's rows come in one file and all files at once."""
+    """Return what the ledger says if each recorder's rows are one file and all come at once."""
     site = hall.new_site(tmp_path_factory.mktemp("once") / "site", late_closing(hall.split_text()))
     hall.put_all(site, logs)
     hall.run(site, AFTER)
@@ -95,7 +95,7 @@ def test_a_pass_for_each_of_many_small_files(hall, site, logs, at_once):
         for number, (start, end) in enumerate(pairwise(["", *edges, END]))
         for log in logs
     ]
-    random.Random(11).shuffle(files)
+    files = [files[n] for n in np.random.default_rng(11).permutation(len(files))]
     for batch in range(5):
         for log, number in files[batch::5]:
             log.put(site, f"part{number:02d}")
@@ -165,9 +165,7 @@ def undisputed_totals(hall, at_once):
     return {name: row for name, row in at_once.items() if name.startswith("total")}
 
 
-def test_overlapping_files_that_disagree(
-    hall, tmp_path, logs, disputed_rows, undisputed_totals
-):
+def test_overlapping_files_that_disagree(hall, tmp_path, logs, disputed_rows, undisputed_totals):
     """The hour is disputed, conflicts and an alert are there, whichever file came first."""
     found = []
     for first in ("all", "other"):
@@ -307,7 +305,7 @@ def test_same_bytes_under_another_name(hall, undisturbed, copy_of, monkeypatch):
 
     site = copy_of(undisturbed)
     counted, before = hall.sums(site), hall.figures(site)
-    known = sorted((site.parent / "logs" / "weather").iterdir())[0]
+    known = min((site.parent / "logs" / "weather").iterdir())
     hall.lay(known.with_name("barometer_again.csv"), known.read_bytes())
     hall.run(site)
     assert hall.sums(site) == counted

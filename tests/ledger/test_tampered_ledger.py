@@ -27,7 +27,7 @@ def verified(site: Path) -> tuple[int, str]:
 
 @pytest.fixture(scope="module")
 def good(hall, flawed_day, tmp_path_factory) -> Path:
-    """A ledger of three passes: half of the files, the other half, closing; and yesterday's copy.
+    """Make a ledger of three passes, half of the files, the rest, closing, and yesterday's copy.
 
     Yesterday's database is the one after the first pass.
     """
@@ -84,9 +84,7 @@ def one_byte(table: str, column: str) -> Callable[[sqlite3.Connection], None]:
         at, blob = database.execute(f"SELECT rowid, {column} FROM {table} LIMIT 1").fetchone()
         changed = bytearray(blob)
         changed[8 * 11 * 3 + 1] ^= 1
-        database.execute(
-            f"UPDATE {table} SET {column} = ? WHERE rowid = ?", (bytes(changed), at)
-        )
+        database.execute(f"UPDATE {table} SET {column} = ? WHERE rowid = ?", (bytes(changed), at))
 
     return change
 
@@ -116,9 +114,12 @@ def delete_total_and_audit_row(database: sqlite3.Connection) -> None:
 
 def swap_totals(database: sqlite3.Connection) -> None:
     """Each of two meters gets the other's row."""
-    one, other = [row[0] for row in database.execute(
-        "SELECT DISTINCT meter FROM total_revision WHERE revision = 1 ORDER BY meter LIMIT 2"
-    )]
+    one, other = [
+        row[0]
+        for row in database.execute(
+            "SELECT DISTINCT meter FROM total_revision WHERE revision = 1 ORDER BY meter LIMIT 2"
+        )
+    ]
     for old, new in ((one, "x"), (other, one), ("x", other)):
         database.execute("UPDATE total_revision SET meter = ? WHERE meter = ?", (new, old))
 
