@@ -175,8 +175,12 @@ MISSING: tuple[tuple[str, str], ...] = (
     ("excluded", "an excluded interval of the site file"),
     ("reverse_flow", "dp below minus the cut-off: flow against the device's direction"),
     ("no_gas_state", "no gas phase at this pressure and temperature"),
-    ("not_converged", "the flow equation did not converge"),
+    ("not_converged", "the flow equation has no solution here: Re_D below 500, or no convergence"),
     ("meter_not_in_service", "before the meter's first terms"),
+    (
+        "impossible_state",
+        "an absolute pressure or temperature that is not positive, or a dp above the pressure",
+    ),
 )
 """Why time is not measured; the hourly record holds the seconds lost to each."""
 

@@ -194,9 +194,9 @@ def correct(records: Sequence[EraRecords], gases: GasLibrary) -> Corrected:
         Bad readings are values, never errors: a record that cannot be measured is NaN with
         its reason. Reasons are given in this order: no dp; (a dp below the cut-off is a
         measured zero, whatever else is missing); reverse flow; static pressure, temperature
-        or barometer missing; no gas state (also at an absolute pressure or temperature that
-        is not positive, and at a dp that leaves no pressure downstream); not converged (also
-        below Re_D = 500).
+        or barometer missing; impossible state (an absolute pressure or temperature that is
+        not positive, or a dp that leaves no pressure downstream); no gas state; not converged
+        (also below Re_D = 500).
 
     Raises
     ------
@@ -282,7 +282,7 @@ def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
     missing = np.full(count, MEASURED, dtype=np.int64)
     possible = (at_tapping > 0.0) & (static_pressure > dp) & (temperature > 0.0)
     for reason, condition in (  # the last one that applies stands
-        ("no_gas_state", forward & ~possible),
+        ("impossible_state", forward & ~possible),
         ("missing_barometric_pressure", forward & ~np.isfinite(atmosphere)),
         ("missing_temperature", forward & ~np.isfinite(temperature)),
         ("missing_static_pressure", forward & ~np.isfinite(logged_pressure)),

@@ -338,10 +338,10 @@ def test_reverse_flow() -> None:
         (9e3, np.nan, np.nan, "missing_static_pressure"),
         (9e3, 2e6, np.nan, "missing_temperature"),
         (9e3, 2e6, np.inf, "missing_temperature"),
-        (9e3, 0.0, 300.0, "no_gas_state"),
-        (9e3, -1e5, 300.0, "no_gas_state"),
-        (9e3, 2e6, 0.0, "no_gas_state"),
-        (9e3, 2e6, -5.0, "no_gas_state"),
+        (9e3, 0.0, 300.0, "impossible_state"),
+        (9e3, -1e5, 300.0, "impossible_state"),
+        (9e3, 2e6, 0.0, "impossible_state"),
+        (9e3, 2e6, -5.0, "impossible_state"),
         (9e3, 2e6, 150.0, "no_gas_state"),
     ],
 )
@@ -366,7 +366,7 @@ def test_dp_that_leaves_no_pressure_downstream() -> None:
         records([9e3], p=9e3),
         records([9e3], p=9e3, era=meter(static_pressure_tapping=Tapping.DOWNSTREAM)),
     )
-    assert reasons(result) == ["no_gas_state", ""]
+    assert reasons(result) == ["impossible_state", ""]
     assert flagged(result) == [set(), {"pressure_ratio_outside_limits"}]
 
 

@@ -95,8 +95,10 @@ def _build(file: SiteFile, text: str, findings: Findings) -> Site | None:
     meters = [
         build_meter(name, t, file, measured, findings) for name, t in (file.meter or {}).items()
     ]
+    calendar = None if file.site is None else build_calendar(file.site, findings)
     envelopes = [
-        build_envelope(name, t, file, findings) for name, t in (file.envelope or {}).items()
+        build_envelope(name, t, file, calendar, findings)
+        for name, t in (file.envelope or {}).items()
     ]
     good_gases = tuple(gas for gas in gases if gas is not None)
     good_meters = tuple(meter for meter in meters if meter is not None)
@@ -104,7 +106,6 @@ def _build(file: SiteFile, text: str, findings: Findings) -> Site | None:
     table = file.site
     if table is None:
         return None
-    calendar = build_calendar(table, findings)
     base = build_base_conditions(table, calendar, findings)
     atmosphere = build_atmosphere(table, measured, findings)
     if table.database is not None:

@@ -7,7 +7,8 @@ from typing import Any
 
 from meterfix.intake.site.findings import Findings, Place, instant_text
 from meterfix.intake.site.tables import EnvelopeTable, MeterTable, OrificeTable, SiteFile
-from meterfix.intake.site.terms import texts_with_places, value_place
+from meterfix.intake.site.terms import at_edges, texts_with_places, value_place
+from meterfix.model.calendar import GasDayCalendar
 from meterfix.model.device import OrificePlate, Tappings
 from meterfix.model.gas import Gas
 from meterfix.model.site import (
@@ -217,9 +218,13 @@ def check_use(
 
 
 def build_envelope(
-    name: str, table: EnvelopeTable, file: SiteFile, findings: Findings
+    name: str,
+    table: EnvelopeTable,
+    file: SiteFile,
+    calendar: GasDayCalendar | None,
+    findings: Findings,
 ) -> Envelope | None:
-    """Return one envelope."""
+    """Return one envelope; its tolerance changes only at a gas-day edge, where days are judged."""
     place: Place = ("envelope", name)
     before = len(findings.mistakes)
     known = file.meter or {}
@@ -250,6 +255,8 @@ def build_envelope(
     tolerance: Versions[Tolerance] | None = None
     if table.tolerance is not None:
         tolerance = findings.versions((*place, "tolerance"), entries, what="tolerance")
+    if tolerance is not None:
+        at_edges((*place, "tolerance"), tolerance, calendar, "tolerance", findings)
     if tolerance is None or not table.in_ or not table.out or len(findings.mistakes) > before:
         return None
     asked = set(table.quantities or []) | {"mass"}

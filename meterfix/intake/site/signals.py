@@ -14,6 +14,7 @@ from meterfix.intake.site.tables import (
     SiteFile,
     SourceTable,
 )
+from meterfix.model.calendar import SECOND
 from meterfix.model.source import (
     Between,
     Excluded,
@@ -37,6 +38,10 @@ class _Meaning:
     holds: str | None
     stamp: str | None
     interval: int | None
+    between: str | None
+    maximum_gap: int | None
+    """us; a gap or age that cannot be read is reported with its source."""
+    maximum_age: int | None
 
 
 def quantities(file: SiteFile) -> dict[str, Quantity | None]:
@@ -202,22 +207,42 @@ def _origin(
     return source, columns[origin.column]
 
 
+def _meaning(source: SourceTable, column: ColumnTable) -> _Meaning:
+    def duration(text: str | None) -> int | None:
+        return None if text is None else Findings("").duration((), text, positive=False)
+
+    gap = column.maximum_gap or source.maximum_gap
+    return _Meaning(
+        column.quantity,
+        column.reference,
+        column.root,
+        column.holds,
+        source.stamp,
+        _interval(source),
+        column.between or source.between,
+        duration(gap),
+        duration(column.maximum_age or source.maximum_age or gap),
+    )
+
+
 def _agree(
     place: Place, found: list[tuple[OriginTable, SourceTable, ColumnTable]], findings: Findings
 ) -> None:
-    meanings = [
-        _Meaning(c.quantity, c.reference, c.root, c.holds, s.stamp, _interval(s))
-        for _, s, c in found
-    ]
+    meanings = [_meaning(source, column) for _, source, column in found]
     for n, meaning in enumerate(meanings[1:], start=1):
         for field in _Meaning.__dataclass_fields__:
             first, other = getattr(meanings[0], field), getattr(meaning, field)
             if first != other:
                 findings.add(
                     (*place, "from", n),
-                    f"its {field} is {other!r}, that of the first origin {first!r}",
+                    f"its {field} is {_told(other)}, that of the first origin {_told(first)}",
                     "the origins of one signal must mean the same; make it two signals",
                 )
+
+
+def _told(meaning: str | int | None) -> str:
+    """Return a word in quotes, a duration in seconds."""
+    return f"{meaning / SECOND:g} s" if isinstance(meaning, int) else repr(meaning)
 
 
 def _excluded(place: Place, table: SignalTable, findings: Findings) -> tuple[Excluded, ...]:

@@ -147,6 +147,7 @@ holds = "mean"
     found = mistakes_of(text)
     assert {m.where for m in found} == {"site.toml, [signal.PT-101.from #2]"}
     fields = " ".join(m.given for m in found)
-    for word in ("reference", "holds", "stamp", "interval"):
+    for word in ("reference", "holds", "stamp", "interval", "between", "maximum_age"):
         assert f"its {word} is" in fields
-    assert len(found) == 4
+    assert "its maximum_age is 300 s, that of the first origin 900 s" in fields
+    assert len(found) == 6
