@@ -29,7 +29,6 @@ from meterfix.store.ledger import Ledger
 SLICE_BYTES = 96 * 1024 * 1024
 """A pass takes files up to about this size in all (a packed one counts eightfold)."""
 SLICE_FILES = 4_000
-CRASHES_BEFORE_TRIAL = 2
 PACKED_FACTOR = 8
 REFUSED = "refused: "
 """How the reason of a file begins that is never read as it is: a link, a pipe, too large."""
@@ -176,23 +175,6 @@ def take_slice(opened: OpenSite, known: Known, arrival: int) -> Slice:
             if source.delivery is Delivery.WHOLE or outcome is None:
                 taken.seen.append(_seen_row(name, stamp))
     return taken
-
-
-def suspects(taken: Slice, known: Known) -> list[int]:
-    """Return the places in the slice of files that were in hand when passes died, twice or more.
-
-    They are tried alone before they go on.
-    """
-    return [
-        number
-        for number, file in enumerate(taken.arrived)
-        if known.attempts.get(attempt_key(file), 0) >= CRASHES_BEFORE_TRIAL
-    ]
-
-
-def attempt_key(file: Arrived) -> tuple[str, str, str, str]:
-    """Return the key under which attempts at a file are counted."""
-    return (file.source, file.binding, file.name, file.raw_sha256)
 
 
 def parse_arrived(

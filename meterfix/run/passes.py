@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import uuid
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from datetime import date
 from typing import Any
 
@@ -13,6 +13,7 @@ from meterfix.calc.gas.properties import GasLibrary
 from meterfix.frames import CALCULATION_VERSION
 from meterfix.run import alerts, clock
 from meterfix.run.absent import absence_warning
+from meterfix.run.attempts import Attempts
 from meterfix.run.balances import Balances
 from meterfix.run.book import Book
 from meterfix.run.compute import Key, Report, compute
@@ -22,9 +23,7 @@ from meterfix.run.gather import (
     Arrived,
     Known,
     Slice,
-    attempt_key,
     parse_arrived,
-    suspects,
     take_slice,
 )
 from meterfix.run.judge import Judged, Verdicts, judge
@@ -33,14 +32,12 @@ from meterfix.run.periods import filled, in_service, touched
 from meterfix.run.pool import Pool, ranks_as_of
 from meterfix.run.rejudge import Again, to_judge_again
 from meterfix.run.settle import Settled, Settling
-from meterfix.run.trial import faults
 from meterfix.store.fingerprint import fingerprint
 from meterfix.store.ledger import Ledger, PassRecord
 
 ACTOR = "meterfix"
 NAMED_AT_CLOSE = 3
 """Waiting files that the reason of a close names; of more it gives the number."""
-_ATTEMPT = ("source", "binding", "name", "raw_sha256")
 
 
 @dataclass(frozen=True)
@@ -69,10 +66,8 @@ class PassWork:
     gases: GasLibrary
     report: Report | None = None
     known: Known = field(init=False)
-    in_hand: bool = False
-    """Files are being read and figures computed; what fails now may be one of theirs."""
-    tried: bool = False
-    """Files were tried alone, and those in hand passed: what fails now is not theirs."""
+    attempts: Attempts | None = field(default=None, init=False)
+    """None until the pass knows its files."""
     storing: bool = False
     """The files have been read and their figures computed; what fails now is not theirs."""
 
@@ -87,9 +82,10 @@ class PassWork:
         last_now = max((row["now_us"] for row in passes), default=0)
         arrival = self.now
         taken = take_slice(self.opened, self.known, arrival)
-        taken = self._try_suspects(taken)
+        attempts = self.attempts = Attempts(self.opened, self.known)
+        taken = attempts.try_suspects(taken, self.now, rehearse)
         again, more_again = to_judge_again(self.opened)
-        self._begin_attempt(taken.arrived)
+        attempts.begin(taken.arrived)
         more = taken.more or more_again
         site_changed = self._last_site(passes) != self.opened.site.digest
         behind = self.now < last_now
@@ -181,55 +177,21 @@ class PassWork:
         rows["raw_object"] = list(raw_rows.values())
         return rows, verdicts, pool, last
 
-    def _try_suspects(self, taken: Slice) -> Slice:
-        """Try alone what was in hand when passes died; mark what fails as quarantined."""
-        places = suspects(taken, self.known)
-        if not places:
-            return taken
-        self.tried = True
-        found = faults(
-            self.opened.path, [taken.arrived[place] for place in places], self.now, rehearse
+    @property
+    def may_be_a_files_fault(self) -> bool:
+        """Whether what fails now can be the fault of a file in hand."""
+        attempts = self.attempts
+        return (
+            attempts is not None
+            and attempts.in_hand
+            and not attempts.blameless
+            and not self.storing
         )
-        arrived = list(taken.arrived)
-        for number, fault in found.items():
-            file = arrived[places[number]]
-            crashes = self.known.attempts[attempt_key(file)]
-            reason = f"passes died {crashes} times with this file in hand; tried alone, {fault}"
-            arrived[places[number]] = replace(file, quarantined=reason)
-        return replace(taken, arrived=arrived)
-
-    def _begin_attempt(self, arrived: Sequence[Arrived]) -> None:
-        """Remember, outside the pass's transaction, which files it is about to take in."""
-        cleared = set(suspects(Slice(list(arrived)), self.known)) if self.tried else set()
-        rows = [
-            {
-                "source": file.source,
-                "binding": file.binding,
-                "name": file.name,
-                "raw_sha256": file.raw_sha256,
-                "crashes": 1
-                if number in cleared
-                else self.known.attempts.get(attempt_key(file), 0) + 1,
-                "alone": number in cleared,
-            }
-            for number, file in enumerate(arrived)
-            if not file.quarantined
-        ]
-        if rows:
-            self.in_hand = True
-            self.opened.ledger.write_outside(replace={"attempt": rows})
 
     def forgive(self) -> None:
         """Take the marks back off the files of a pass that failed for no fault of theirs."""
-        if not self.in_hand:
-            return
-        marks = [
-            {**dict(zip(_ATTEMPT, key, strict=True)), "crashes": crashes, "alone": 0}
-            for key, crashes in self.known.attempts.items()
-        ]
-        stored = self.opened.ledger.rows("attempt", columns=_ATTEMPT)
-        gone = [row for row in stored if tuple(row.values()) not in self.known.attempts]
-        self.opened.ledger.write_outside(replace={"attempt": marks}, remove={"attempt": gone})
+        if self.attempts is not None:
+            self.attempts.forgive()
 
     def rehearse(self, file: Arrived) -> None:
         """Do all of a pass for one file alone, but commit nothing."""

@@ -90,10 +90,8 @@ def process(
             except Exception as error:
                 # whatever a file's bytes can do to the code that reads them ends here, once
                 # per attempt: after two marks beside the files the next pass tries them alone
-                if work.storing:
+                if not work.may_be_a_files_fault:
                     work.forgive()
-                    raise
-                if work.tried or not work.in_hand:
                     raise
                 sentence = f"a pass failed: {type(error).__name__}: {error}"
                 done.crashes.append(sentence)

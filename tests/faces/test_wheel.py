@@ -98,7 +98,7 @@ def test_the_wheel_brings_nothing_else(installed):
 
 
 def test_demo_works_from_the_wheel(installed, tmp_path):
-    """`meterfix demo FOLDER`, away from the checkout: gas-day totals, the balance, exit 0."""
+    """`meterfix demo FOLDER`, away from the checkout: what the README shows of it, and exit 0."""
     done = run_installed(installed, tmp_path, "demo", "works")
     assert done.returncode == 0, done.stderr
     assert done.stderr == ""
@@ -110,6 +110,9 @@ def test_demo_works_from_the_wheel(installed, tmp_path):
         re.match(r"works +2026-10-31 +[\d.]+ +[\d.]+ +-?[\d.]+ +[\d.]+ +kg", x) for x in lines
     )
     assert "Results are for accounting, never for safety functions." in " ".join(lines)
+    readme = (ROOT / "README.md").read_text(encoding="utf-8")
+    (excerpt,) = re.findall(r"^```text\n(.*?)^```$", readme, re.MULTILINE | re.DOTALL)
+    assert {line.rstrip() for line in excerpt.splitlines()} <= {line.rstrip() for line in lines}
     site = str(tmp_path / "works" / "site.toml")
     again = run_installed(installed, tmp_path, "demo", "works")
     assert again.returncode == 0, again.stderr

@@ -87,6 +87,30 @@ def test_three_slices(order, now, hall, site, slices, at_once):
     assert not hall.prove(site).findings
 
 
+@pytest.mark.parametrize("now", [BEFORE, AFTER], ids=["open between", "closed between"])
+def test_files_that_meet_at_the_edge_of_the_gas_day(now, hall, tmp_path, logs):
+    """The next day's first reading ends the last interval of the day before, whenever it comes.
+
+    The edge is at 06:00 UTC here, where blocks in which readings are looked at meet too.
+    """
+    text = late_closing(hall.split_text()).replace(
+        'gas_day_start = "06:00"', 'gas_day_start = "08:00"'
+    )
+    edge = "2026-10-02T06:00:00Z"
+    found = []
+    for name, cuts in (("once", [("", END)]), ("cut", [("", edge), (edge, END)])):
+        site = hall.new_site(tmp_path / name, text)
+        for number, cut in enumerate(cuts):
+            for log in logs:
+                log.between(*cut).put(site, f"part{number}")
+            hall.run(site, now)
+        found.append(hall.figures(site))
+    day = next(r for n, r in found[0].items() if n.startswith("total") and r["meter"] == "FT-202"
+               and r["kind"] == "gas_day" and r["gas_day"] == "2026-10-01")  # fmt: skip
+    assert day["measured_time_s"] == 86400.0
+    assert hall.differences(*found) == []
+
+
 def test_a_pass_for_each_of_many_small_files(hall, site, logs, at_once):
     """Files of six hours, shuffled, some passes with the clock before and some after deadlines."""
     edges = [f"2026-10-{day:02d}T{hour:02d}" for day in range(1, 5) for hour in (0, 6, 12, 18)]
