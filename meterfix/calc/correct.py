@@ -465,7 +465,7 @@ def _temperature_upstream(
 
     References
     ----------
-    .. [1] ISO 5167-1:2003, 5.4.4.1.
+    .. [1] ISO 5167-1:2003, 5.4.4.1 (from memory).
     """
     upstream = temperature.copy()
     if not far.any():

@@ -106,6 +106,45 @@ def test_all_flags_at_once_fit_100_columns():
         assert short.split()[0] in text
 
 
+def test_a_balance_as_wide_as_it_can_be_loses_no_figure():
+    """Every column at its widest: headings stay whole where they can, figures always."""
+    row = {
+        "envelope": "works",
+        "gas_day": "2026-10-01",
+        "in": 1234567.0,
+        "out": 1234567.0,
+        "imbalance": -84.3115,
+        "tolerance": 1627.43,
+        "unit": "kg",
+        "beyond_tolerance": "cannot be judged: missing input",
+        "measured_fraction": 0.9876,
+        "status": "provisional",
+        "revision": 12,
+    }
+    text = printed("balances", [row], by="gas-day")
+    assert max(map(len, text.splitlines())) <= 100
+    for part in ("envelope", "-84.3115", "1627.43", "not judged", "98.76 %", "provisional", "12"):
+        assert part in text
+
+
+@pytest.mark.parametrize(
+    ("full", "short"),
+    [
+        ("excluded 2400.0 s", "excluded 2400 s"),
+        ("excluded 86399.987654 s", "excluded 86399.98 s"),
+        ("excluded 1e-06 s", "excluded <0.01 s"),
+        ("not yet over 2422800.0 s", "not yet over 2422800 s"),
+        ("FT-1.2345 (99.99999999 % measured)", "FT-1.2345 (99.99 % measured)"),
+        ("A (50.0 % measured, no energy for 1800.125 s of it)",
+         "A (50 % measured, no energy for 1800.12 s of it)"),
+        ("left out: 2026-06-03 to 2026-06-30", "left out: 2026-06-03 to 2026-06-30"),
+    ],
+)  # fmt: skip
+def test_notes_are_shortened_and_never_rounded_up(full, short):
+    """Seconds and percent lose decimals under a table; names and dates lose nothing."""
+    assert render.shortened(full) == short
+
+
 def test_control_characters_of_a_log_are_escaped():
     """Text that was set aside cannot move the cursor or colour the screen."""
     row = {

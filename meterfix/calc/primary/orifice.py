@@ -63,8 +63,8 @@ def diameter_at(
 
     References
     ----------
-    .. [1] ISO 5167-1:2003, 5.4.4.1: d and D are those at working conditions; linear law:
-       common practice.
+    .. [1] ISO 5167-1:2003, 5.4.4.1 (clause from memory): d and D are those at working
+       conditions; linear law: common practice.
     """
     return diameter * (1.0 + expansion * (temperature - reference_temperature))
 

@@ -96,20 +96,25 @@ def test_missing_input_takes_the_imbalance_and_names_the_meter():
     balance = day_balance(WORKS, "mass", records, TOLERANCE)
     assert balance.imbalance is None
     assert balance.outflow == 1990.0
-    assert str(balance.beyond_tolerance) == "cannot be judged: missing input: C (99.98 % measured)"
+    assert str(balance.beyond_tolerance) == (
+        f"cannot be judged: missing input: C ({100.0 * (7199.0 / 7200.0)!r} % measured)"
+    )
     assert column(balance, "imbalance")[0] == 15.0
     assert np.isnan(column(balance, "imbalance")[1])
     assert column(balance, "out").tolist() == [980.0, 1010.0]
-    assert balance.hourly_reasons == ("", "missing input: C (99.97 % measured)")
+    percent = 100.0 * (3599.0 / 3600.0)
+    assert balance.hourly_reasons == ("", f"missing input: C ({percent!r} % measured)")
     assert balance.measured_fraction == 7199.0 / 7200.0
     assert column(balance, "measured_fraction").tolist() == [1.0, 3599.0 / 3600.0]
 
 
 def test_a_microsecond_is_not_rounded_to_all():
-    """A meter that misses a microsecond is never shown as measured to 100 %."""
+    """A meter that misses a microsecond says so: the reason carries every digit."""
     records = works(A=record([600.0, 500.0], measured=[3600.0, 3599.999999]))
     balance = day_balance(WORKS, "mass", records, TOLERANCE)
-    assert balance.reason == "missing input: A (99.99 % measured)"
+    percent = 100.0 * (7199.999999 / 7200.0)
+    assert balance.reason == f"missing input: A ({percent!r} % measured)"
+    assert percent < 100.0
     assert balance.imbalance is None
 
 
@@ -131,9 +136,33 @@ def test_a_quantity_that_a_meter_does_not_have_is_named():
     """Measured throughout but without energy: cannot be judged, every meter is named."""
     balance = day_balance(WORKS, "energy", works(), TOLERANCE)
     assert (balance.inflow, balance.imbalance) == (None, None)
-    assert balance.reason == (
-        "missing input: A (no energy), B (no energy), C (no energy), V (no energy)"
-    )
+    lack = "no energy for 7200.0 s of the measured time"
+    assert balance.reason == f"missing input: A ({lack}), B ({lack}), C ({lack}), V ({lack})"
+
+
+def test_energy_of_a_part_of_the_day_is_no_input():
+    """A has energy in hour 1 only and misses a second of it: nothing goes in, both are named."""
+    records = works(A=record([600.0, 500.0], measured=[3600.0, 3599.0]))
+    for one in records.values():
+        one.statistics[:, HOURLY_INDEX["energy"]] = 40e6
+    records["A"].statistics[0, HOURLY_INDEX["energy"]] = np.nan
+    balance = day_balance(WORKS, "energy", records, TOLERANCE)
+    assert (balance.inflow, balance.imbalance, balance.tolerance) == (None, None, None)
+    assert balance.outflow == 80e6
+    lack = "no energy for 3600.0 s of the measured time"
+    percent = 100.0 * (7199.0 / 7200.0)
+    assert balance.reason == f"missing input: A ({percent!r} % measured, {lack})"
+    assert balance.hourly_reasons[0] == f"missing input: A ({lack})"
+    assert np.isnan(column(balance, "in")[0])
+    assert column(balance, "in")[1] == 80e6
+
+
+def test_a_day_with_missing_input_has_no_tolerance():
+    """1.5 % of a part of what went in is not the contract's figure: there is none."""
+    records = works(A=record([600.0, np.nan], measured=[3600.0, 0.0]))
+    balance = day_balance(WORKS, "mass", records, TOLERANCE)
+    assert balance.inflow == 1500.0
+    assert balance.tolerance is None
 
 
 def test_an_hour_without_a_number_is_missing_input():
@@ -142,7 +171,7 @@ def test_an_hour_without_a_number_is_missing_input():
     balance = day_balance(WORKS, "mass", records, TOLERANCE)
     assert balance.inflow == 600.0 + 900.0
     assert balance.imbalance is None
-    assert balance.reason == "missing input: A (50.00 % measured)"
+    assert balance.reason == "missing input: A (50.0 % measured)"
     assert np.isnan(column(balance, "in")[1])
 
 

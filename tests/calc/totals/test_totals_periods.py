@@ -43,6 +43,31 @@ def test_a_total_that_no_hour_has_is_none():
     assert month_total([total, total]).mass == 6.0
 
 
+def test_a_part_of_the_energy_is_no_energy():
+    """Energy of one measured hour of two is not the day's: None, and the other hour's seconds."""
+    total = day_total(
+        record(
+            mass=[1.0, 2.0, np.nan],
+            energy=[np.nan, 8.0, np.nan],
+            measured_time=[3600.0, 1800.0, 0.0],
+        )
+    )
+    assert (total.mass, total.energy) == (3.0, None)
+    assert (total.without["mass"], total.without["energy"]) == (0.0, 3600.0)
+
+
+def test_a_month_without_a_day_s_energy_has_none():
+    """A day measured without energy takes the month's; a day not measured at all does not."""
+    known = day_total(record(mass=[1.0], energy=[4.0], measured_time=[3600.0]))
+    lacking = day_total(record(mass=[1.0], measured_time=[1800.0]))
+    silent = day_total(record(mass=[np.nan]))
+    assert month_total([known, silent]).energy == 4.0
+    assert month_total([known, silent]).without["energy"] == 0.0
+    month = month_total([known, lacking, silent, lacking])
+    assert (month.mass, month.energy) == (3.0, None)
+    assert month.without["energy"] == 3600.0
+
+
 def test_shares_are_weighted_with_flow_time():
     """Flagged throughout 1,200 s and for half of 600 s of flow: 1,500 s of 1,800 s."""
     total = day_total(record(flow_time=[1200.0, 600.0, 0.0], share_over_range=[1.0, 0.5, np.nan]))

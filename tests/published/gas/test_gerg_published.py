@@ -12,6 +12,8 @@ from meterfix.calc.gas.gerg_gas import GergGas
 from meterfix.calc.gas.gerg_tables import GAS_CONSTANT
 
 TABLE = "gerg2008_check_values.csv"
+TABLE_DIGITS = {"Z": 5e-7, "W": 5e-4}
+"""Half the last printed digit."""
 LIQUID_OR_BELOW_TWO_ROOTS = {
     # dense states that no isotherm reaches from the gas without falling: the dense root is asked
     "ISO20765_G1_T180_p10",
@@ -71,9 +73,9 @@ def test_gerg_21_components_case(published, compositions):
 
 
 def test_gerg_compression_factor_and_speed_of_sound_tables(published, compositions):
-    """Z to the printed 6 decimals and w to 0.001 m/s in the SI tables of three reference gases.
+    """Z and w of the SI tables of three reference gases: to half the last printed digit.
 
-    Tolerance: one unit of the last printed digit, as the rows state.
+    That is 5e-7 in Z and 5e-4 m/s in w.
     """
     rows = [row for row in published(TABLE) if row["case_id"].startswith("AGA8_SI")]
     assert len(rows) == 72
@@ -81,13 +83,19 @@ def test_gerg_compression_factor_and_speed_of_sound_tables(published, compositio
         gas = _gas(compositions[row["comp_id"]])
         states = gas.states(_array(row["p_kPa"], 1e3), _array(row["T_K"]))
         computed = states.compression_factor if row["property"] == "Z" else states.speed_of_sound
-        assert computed[0] == pytest.approx(float(row["expected"]), abs=float(row["abs_tol"]))
+        assert computed[0] == pytest.approx(
+            float(row["expected"]), abs=TABLE_DIGITS[row["property"]]
+        )
+        assert float(row["abs_tol"]) == TABLE_DIGITS[row["property"]]
 
 
 def test_gerg_temperature_and_density_points(published, compositions):
     """P, Cv, Cp and w of seven field gases at printed temperature and density.
 
-    Tolerance: the rows' own (1e-4 of the pressure; 0.0005, 0.005 and 0.005 for the others).
+    Not to half the printed digit, which most rows miss, unexplained: by up to 7e-6 of P, 0.0002
+    J/(mol K) and 0.0008 m/s. (NIST's code gives what meterfix gives, see tests/calc/gas;
+    these rows are of the spreadsheet beside it.) Held to the rows' own tolerance: 1e-4 of P;
+    0.0005 and 0.005 J/(mol K) for Cv and Cp; 0.005 m/s.
     """
     rows = [row for row in published(TABLE) if row["case_id"].startswith("NIST_NG")]
     assert len(rows) == 84

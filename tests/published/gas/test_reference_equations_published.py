@@ -25,6 +25,8 @@ NAMES = {
     "Methane": "methane",
     "Air": "air",
 }
+UNEXPLAINED_SPEEDS = [("Air", "2000", "1e+07", "878.6")]
+"""Not met to half the printed digit: printed 878.6 m/s, computed 878.534 m/s."""
 PSI = 6894.757293168
 """Pa."""
 BASES = {
@@ -51,12 +53,13 @@ def _half_digit(printed: str) -> float:
 def test_densities_of_the_papers(published):
     """Density and speed of sound of N2, CO2, Ar, CH4 and air to half the last printed digit.
 
-    Listed exception: the speed of sound of air at 2000 K and 10 MPa, printed 878.6 m/s, comes
-    out as 878.534 m/s; it is held to 0.07 m/s. The isentropic exponents are derived from the
-    printed densities and speeds and carry twice the relative rounding of the speed.
+    One speed of sound is excepted, see `UNEXPLAINED_SPEEDS`; it is no part of what passes here.
+    The isentropic exponents are derived from the printed densities and speeds: they carry twice
+    the relative rounding of the speed, that of the density, and that of their own five digits.
     """
     rows = published("pure_gas_densities.csv")
     assert len(rows) == 20
+    missed = []
     for row in rows:
         gas = PureGas(NAMES[row["gas"]])
         states = gas.states(np.array([float(row["p_Pa"])]), np.array([float(row["T_K"])]))
@@ -66,15 +69,23 @@ def test_densities_of_the_papers(published):
         computed = states.density[0] if by_mass else amount[0]
         assert computed == pytest.approx(float(printed), rel=0.0, abs=_half_digit(printed)), row
         speed = row["speed_of_sound_m_s"]
-        allowed = 0.07 if (row["gas"], row["T_K"]) == ("Air", "2000") else _half_digit(speed)
-        assert states.speed_of_sound[0] == pytest.approx(float(speed), rel=0.0, abs=allowed), row
+        allowed = _half_digit(speed)
+        if abs(states.speed_of_sound[0] - float(speed)) > allowed:
+            missed.append((row["gas"], row["T_K"], row["p_Pa"], speed))
+            continue
         kappa = float(row["isentropic_exponent_derived"])
         rounding = 2.0 * allowed / float(speed) + _half_digit(printed) / float(printed) + 5e-5
         assert states.isentropic_exponent[0] == pytest.approx(kappa, rel=rounding), row
+    assert missed == UNEXPLAINED_SPEEDS
 
 
-def test_air_table(published):
-    """Z of air, 200 to 400 K and 1 to 500 bar, within the table's stated 0.5 %."""
+def test_air_is_plausible(published):
+    """Z of air, 200 to 400 K and 1 to 500 bar, is within 0.5 % of a table written from memory.
+
+    No published check, one of plausibility: the table was not traced to its print, and its 0.5 %
+    is no figure of its own. It was set to cover the table's difference from modern equations as
+    CoolProp computes them, and CoolProp is what computes the values under test.
+    """
     gas = PureGas("air")
     rows = published("air_compression_factors.csv")
     assert len(rows) == 51
@@ -117,8 +128,9 @@ def test_ideal_volumes_between_base_conditions(published):
 def test_real_volumes_between_base_conditions(published, quantity, fractions):
     """Real-gas volume factors by AGA8 DETAIL agree with those by ISO 6976:2016 to 1e-5.
 
-    The two compute Z each in its own way; 1e-5 is far inside the uncertainty of the summation
-    factors (0.0005 in s of methane near 0.045, which is 4.5e-5 in Z at each base).
+    The factors are computed from that standard's summation factors, not printed. The two compute
+    Z each in its own way; 1e-5 is far inside the uncertainty of the summation factors (0.0005
+    in s of methane near 0.045, which is 4.5e-5 in Z at each base).
     """
     density = _base_density(fractions, StateModel.AGA8_DETAIL)
     rows = [row for row in published("base_conditions.csv") if row["quantity"] == quantity]
@@ -132,9 +144,28 @@ def test_real_volumes_between_base_conditions(published, quantity, fractions):
         assert abs(factor / ideal - 1.0) > 5e-5
 
 
-def test_14_65_psia_is_a_base_like_any(published):
-    """At 60 degF a volume at 14.65 psia is 14.73/14.65 times that at 14.73 psia, ideal gas."""
-    density = _base_density(D2, StateModel.IDEAL)
+def test_14_65_psia_is_a_base_like_any():
+    """From 14.73 to 14.65 psia at 60 degF a volume of real gas changes as NIST's code says.
+
+    The factor is the ratio of base densities by AGA8 DETAIL; pyaga8, a port of that code, gives
+    it to 1e-9. No printed value: none of the published rows has this base. The factor is not the
+    ratio of the pressures: Z differs by 1.2e-5.
+    """
+    pyaga8 = pytest.importorskip("pyaga8")
+    composition = pyaga8.Composition()
+    for name, x in D2:
+        setattr(composition, name, x)
+    oracle = pyaga8.Detail()
+    oracle.set_composition(composition)
+    oracle.temperature = BASES["60F 14.73psia"].base_temperature
+    expected = []
+    for psia in (14.73, 14.65):
+        oracle.pressure = psia * PSI / 1e3
+        oracle.calc_density()
+        expected.append(oracle.d)
+    density = _base_density(D2, StateModel.AGA8_DETAIL)
     base = BASES["60F 14.73psia"]
     lower = BaseConditions(14.65 * PSI, base.base_temperature)
-    assert density(base) / density(lower) == pytest.approx(14.73 / 14.65, rel=1e-14)
+    factor = density(base) / density(lower)
+    assert factor == pytest.approx(expected[0] / expected[1], rel=1e-9)
+    assert factor / (14.73 / 14.65) - 1.0 > 1e-6

@@ -16,7 +16,6 @@ from meterfix.calc.primary.flow import Flow, solve_flow
 
 HERE = Path(__file__).parent
 POUND_FORCE_PER_SQUARE_INCH = 6894.757293168
-CUBIC_FOOT = 0.3048**3
 VENTURIS = {
     "venturi_tube_as_cast": venturi.AS_CAST,
     "venturi_as_cast": venturi.AS_CAST,
@@ -24,6 +23,8 @@ VENTURIS = {
     "venturi_tube_rough_welded": venturi.ROUGH_WELDED,
     "venturi_rough_welded": venturi.ROUGH_WELDED,
 }
+BEYOND_HALF_A_DIGIT = {("long_radius_nozzle", "0.46", "10000")}
+"""Printed 0.9523; the standard's equation gives 0.95221; held to one unit of the last digit."""
 NOZZLES = {
     "ISA_1932_nozzle": nozzle.isa_1932_discharge_terms,
     "long_radius_nozzle": nozzle.long_radius_discharge_terms,
@@ -62,12 +63,15 @@ def terms_of(device: str, beta: np.ndarray) -> DischargeTerms | NozzleDischargeT
     [("ISA_1932_nozzle", 234), ("long_radius_nozzle", 279), ("Venturi_nozzle", 32)],
 )
 def test_discharge_coefficient_of_every_row(device: str, count: int) -> None:
-    """C is within each row's tolerance; ISO 5167-3, tables A.1, A.2 and A.3.
+    """C to half the printed digit, but for `BEYOND_HALF_A_DIGIT`; ISO 5167-3, tables A.1 to A.3.
 
     Where a table gives no Reynolds number, C does not depend on it.
     """
     table = [row for row in rows("nozzle_discharge_coefficient.csv") if row["device"] == device]
     assert len(table) == count
+    for row in table:
+        named = (device, row["beta"], row["Re_D"]) in BEYOND_HALF_A_DIGIT
+        assert float(row["abs_tol"]) == (1e-4 if named else 5e-5)
     u = np.array([float(row["Re_D"] or 1e6) for row in table]) ** -0.1
     found = terms_of(device, column(table, "beta")).at(u)
     assert (np.abs(found - column(table, "C_expected")) <= column(table, "abs_tol")).all()
@@ -123,7 +127,7 @@ def flow_by_substitution(
     "row", rows("nozzle_flow.csv"), ids=lambda row: f"{row['case_id']}-{row['device']}"
 )
 def test_complete_flow(row: dict[str, str]) -> None:
-    """A complete case gives the printed mass flow or volume flow."""
+    """A complete case gives the mass flow of its source."""
     given = inputs(row["given"])
     d, D, dp = one(float(row["d_m"])), one(float(row["D_m"])), one(float(row["dp_Pa"]))
     density = one(float(row["rho1_kg_m3"]))
@@ -149,8 +153,5 @@ def test_complete_flow(row: dict[str, str]) -> None:
             "pipe_diameter": D,
         },
     )
-    found = {
-        "kg/s": flow.mass_flow[0],
-        "ft3/s": flow.mass_flow[0] / density[0] / CUBIC_FOOT,
-    }[row["unit"]]
-    assert found == pytest.approx(float(row["expected"]), rel=float(row["rel_tol"]))
+    assert row["unit"] == "kg/s"
+    assert flow.mass_flow[0] == pytest.approx(float(row["expected"]), rel=float(row["rel_tol"]))

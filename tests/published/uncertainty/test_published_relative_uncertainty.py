@@ -1,4 +1,7 @@
-"""ISO 5167's stated uncertainties against figures worked by its rules; the CSV names them."""
+"""ISO 5167's stated uncertainties against figures worked by hand from its rules, none printed.
+
+The CSV names the rules, and which of their numbers are from memory.
+"""
 
 from __future__ import annotations
 
