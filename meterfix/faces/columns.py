@@ -25,6 +25,7 @@ TOTALS = (
     "reason",
     "status",
     "revision",
+    "combustion_reference_temperature_degC",
 )
 BALANCES = (
     "envelope",
@@ -46,6 +47,10 @@ BALANCES = (
     "reason",
     "status",
     "revision",
+    "base_pressure_kPa",
+    "base_temperature_degC",
+    "calorific_value_kind",
+    "combustion_reference_temperature_degC",
 )
 ALERTS = (
     "kind",
@@ -119,7 +124,9 @@ BRIEF = {
         "tolerance",
         "unit",
         "beyond_tolerance",
+        "measured_fraction",
         "status",
+        "revision",
     ),
     "alerts": ("kind", "since", "until", "severity", "message"),
     "files": (
@@ -157,6 +164,8 @@ HEADINGS = {
     "mass_kg": "mass\nkg",
     "energy_MJ": "energy\nMJ",
     "measured_fraction": "measured",
+    "imbalance": "imbal-\nance",
+    "tolerance": "toler-\nance",
     "beyond_tolerance": "beyond\ntolerance",
     "lines_read": "lines\nread",
     "lines_used": "used",

@@ -6,8 +6,10 @@ import csv
 import io
 import json
 import math
+import re
 import textwrap
 from collections.abc import Mapping, Sequence
+from decimal import ROUND_FLOOR, Decimal
 from typing import TYPE_CHECKING, Any
 
 from meterfix.faces.columns import ALL, BRIEF, HEADINGS, PERIOD, SHORT_FLAGS
@@ -19,6 +21,8 @@ if TYPE_CHECKING:
 Row = Mapping[str, Any]
 DIGITS = 6
 """Significant digits of a figure in a table; CSV and JSON carry all of them."""
+_LONG = re.compile(r"(?<![\w.-])[0-9]+(?:\.[0-9]+)?(?:e[+-]?[0-9]+)?(?= (?:s|%)(?!\w))")
+"""A number of seconds or percent inside a sentence; never a part of a name."""
 LONGEST_TEXT = 60
 """Characters of a set-aside text that a table shows."""
 
@@ -74,9 +78,19 @@ def print_table(
     if remarks:
         console.print(remarks, markup=False, highlight=False)
     if rows:
-        console.print(table(what, rows, by), highlight=False)
+        grid = table(what, rows, by)
+        if _width(console, grid) > console.width:
+            grid.padding = (0, 1, 0, 0)
+        console.print(grid, highlight=False)
     else:
         console.print("nothing to show", highlight=False)
+
+
+def _width(console: Console, grid: Table) -> int:
+    """Return how wide a table would be on a screen without an edge."""
+    from rich.measure import Measurement
+
+    return Measurement.get(console, console.options.update(width=10_000), grid).maximum
 
 
 def print_notes(console: Console, title: str, notes: Sequence[str], limit: int) -> None:
@@ -109,8 +123,18 @@ def gaps(rows: Sequence[Row], by: str) -> list[str]:
         if row["losses"]:
             when = _shown({"hour": "period_start", "month": "month"}.get(by, "gas_day"), row)
             subject = row.get("meter") or row.get("subject") or row["envelope"]
-            notes[f"{subject} {when}: {', '.join(row['losses'])}"] = None
+            notes[f"{subject} {when}: {shortened(', '.join(row['losses']))}"] = None
     return list(notes)
+
+
+def shortened(text: str) -> str:
+    """Return a sentence with its times and percentages cut to two decimals, never rounded up."""
+    return _LONG.sub(lambda found: _cut(float(found[0])), text)
+
+
+def _cut(value: float) -> str:
+    hundredths = Decimal(value).quantize(Decimal("0.01"), ROUND_FLOOR)
+    return f"{hundredths:f}".removesuffix(".00") if hundredths or not value else "<0.01"
 
 
 def troubles(rows: Sequence[Row]) -> list[str]:
@@ -180,6 +204,8 @@ def _shown(name: str, row: Row) -> str:
     elif name == "beyond_tolerance":
         answer = str(value).partition(":")[0]
         text = "not judged" if answer == "cannot be judged" else answer
+        if row.get("part"):
+            text = textwrap.fill(f"{text}, {row['part']}", width=len("no, on 3 of 31"))
     else:
         text = str(value)
     return text

@@ -8,12 +8,17 @@ from __future__ import annotations
 import json
 from collections.abc import Iterator, Mapping, Sequence
 from datetime import date
+from functools import lru_cache
 from typing import Any
 
+from meterfix import units
 from meterfix.calc.balance.envelopes import BALANCE_COLUMNS
+from meterfix.calc.balance.months import BASE_CHANGES
 from meterfix.faces.asked import Asked, Row, time_text
 from meterfix.frames import FLAGS, HOURLY_INDEX, MISSING
+from meterfix.frames import TOTALS as QUANTITIES
 from meterfix.model.calendar import HOUR
+from meterfix.run.figures import ABSENT
 from meterfix.run.opening import OpenSite
 from meterfix.store.ledger import Ledger
 from meterfix.store.values import decode_array
@@ -73,20 +78,20 @@ def _total(row: Mapping[str, Any]) -> Row:
     return {
         **_period(row),
         "meter": row["meter"],
-        "base_pressure_kPa": _divided(row["base_pressure_Pa"], 1e3),
-        "base_temperature_degC": _celsius(row["base_temperature_K"]),
+        "base_pressure_kPa": _in(row["base_pressure_Pa"], "kPa"),
+        "base_temperature_degC": _in(row["base_temperature_K"], "degC"),
         "line_volume_m3": row["line_volume_m3"],
         "base_volume_m3": row["base_volume_m3"],
         "mass_kg": row["mass_kg"],
         "energy_MJ": _divided(energy, 1e6),
-        "calorific_value_kind": row["calorific_value_kind"] if energy is not None else None,
+        **_energy_terms(row, known=energy is not None),
         "flow_time_s": row["flow_time_s"],
         "measured_fraction": row["measured_fraction"],
         "basis": row.get("basis", "measured"),
         "flags": _flags(flags["shares"]),
         "shares": flags["shares"],
-        "reason": _reasons(missing, row),
-        "losses": _losses(missing, row),
+        "reason": _reasons(missing, flags["without"], row),
+        "losses": [*_losses(missing), *_parts_without(flags["without"], row)],
         **_status(row),
     }
 
@@ -110,7 +115,8 @@ def _hours(ledger: Ledger, row: Mapping[str, Any], asked: Asked) -> Iterator[Row
             "energy_J": _known(value["energy"]),
             "flow_time_s": value["flow_time"],
             "measured_fraction": value["measured_time"] / value["duration"],
-            "flags": json.dumps({"shares": _known_shares(value)}),
+            "measured_time_s": value["measured_time"],
+            "flags": json.dumps({"shares": _known_shares(value), "without": _without(value)}),
             "missing": json.dumps(
                 {k: value[f"lost_{k}"] for k in EVERY_LOSS if value[f"lost_{k}"]}
             ),
@@ -123,28 +129,54 @@ def _known_shares(value: Mapping[str, float]) -> dict[str, float]:
     return {k: value[f"share_{k}"] for k in EVERY_FLAG if value[f"share_{k}"] > 0}
 
 
+def _without(value: Mapping[str, float]) -> dict[str, float]:
+    """Return the measured time of an hour by the totals that it does not have [s]."""
+    return {
+        name: value["measured_time"]
+        for name in QUANTITIES
+        if value["measured_time"] > 0 and _known(value[name]) is None
+    }
+
+
 def _flags(shares: Mapping[str, float]) -> str:
     """Return flags with their shares of the flow time, in the order of `frames.FLAGS`."""
-    return "; ".join(f"{name} {shares[name]:.4g}" for name in EVERY_FLAG if name in shares)
+    return "; ".join(f"{name} {shares[name]!r}" for name in EVERY_FLAG if name in shares)
 
 
-def _losses(missing: Mapping[str, float], row: Mapping[str, Any]) -> list[str]:
-    """Return why time is not measured, in the order of `frames.MISSING`."""
+def _losses(missing: Mapping[str, float]) -> list[str]:
+    """Return why time is not measured, in the order of `frames.MISSING`; absent gas days last."""
     losses = [
-        f"{name.replace('_', ' ')} {missing[name]:g} s" for name in EVERY_LOSS if name in missing
+        f"{name.replace('_', ' ')} {missing[name]!r} s" for name in EVERY_LOSS if name in missing
     ]
-    if row["kind"] == "month" and row["measured_fraction"] < 1 and not losses:
-        losses.append("gas days without readings or not yet over")
+    if ABSENT in missing:
+        losses.append(f"gas days without readings or not yet over {missing[ABSENT]!r} s")
     return losses
 
 
-def _reasons(missing: Mapping[str, float], row: Mapping[str, Any]) -> str:
-    parts = _losses(missing, row)
-    if row["mass_kg"] is not None:
-        if row["energy_J"] is None:
-            parts.append("energy: no calorific value")
-        if row["base_volume_m3"] is None:
-            parts.append("base volume: the base conditions change within the period")
+def _lacking(without: Mapping[str, float]) -> dict[str, str]:
+    """Return sentences about the totals that measured time does not have, by total."""
+    causes = {"energy": " (no calorific value)"}
+    return {
+        name: f"no {name.replace('_', ' ')} for {without[name]!r} s of the measured time"
+        + causes.get(name, "")
+        for name in QUANTITIES
+        if name in without
+    }
+
+
+def _parts_without(without: Mapping[str, float], row: Mapping[str, Any]) -> list[str]:
+    """Return the sentences about totals that a part only of the measured time does not have."""
+    return [
+        text for name, text in _lacking(without).items() if without[name] < row["measured_time_s"]
+    ]
+
+
+def _reasons(
+    missing: Mapping[str, float], without: Mapping[str, float], row: Mapping[str, Any]
+) -> str:
+    parts = [*_losses(missing), *_lacking(without).values()]
+    if row["base_pressure_Pa"] is None:
+        parts.append(f"base volume: {BASE_CHANGES}")
     parts.append(f"uncertainty: {NO_UNCERTAINTY}")
     if row.get("reason"):
         parts.append(f"revision: {row['reason']}")
@@ -157,6 +189,8 @@ def _reasons(missing: Mapping[str, float], row: Mapping[str, Any]) -> str:
 def _balance(row: Mapping[str, Any]) -> Row:
     reasons = json.loads(row["reason"])
     by = 1e6 if row["quantity"] == "energy" else 1.0
+    judged = row["beyond_tolerance"] != "cannot be judged"
+    part = reasons.get("beyond_tolerance", "") if judged else ""
     return {
         **_period(row),
         "envelope": row["envelope"],
@@ -169,14 +203,19 @@ def _balance(row: Mapping[str, Any]) -> Row:
         "expanded_uncertainty": None,
         "tolerance": _divided(row["tolerance"], by),
         "unit": UNIT[row["quantity"]],
+        "base_pressure_kPa": _in(row["base_pressure_Pa"], "kPa"),
+        "base_temperature_degC": _in(row["base_temperature_K"], "degC"),
+        **_energy_terms(row, known=row["quantity"] == "energy"),
         "significant": _verdict(row["significant"], reasons.get("significant")),
         "beyond_tolerance": _verdict(row["beyond_tolerance"], reasons.get("beyond_tolerance")),
         "measured_fraction": row["measured_fraction"],
+        "part": part,
         "losses": [reasons["input"]] if reasons.get("input") else [],
         "reason": "; ".join(
             text
             for text in (
                 reasons.get("input"),
+                f"beyond tolerance: {part}" if part else None,
                 f"storage change: {reasons['storage_change']}"
                 if "storage_change" in reasons
                 else None,
@@ -269,17 +308,47 @@ def _divided(value: float | None, by: float) -> float | None:
     return None if value is None else value / by + 0.0
 
 
-def _celsius(kelvin: float | None) -> float | None:
-    return None if kelvin is None else round(kelvin - 273.15, 9)
+@lru_cache(maxsize=64)
+def _in(value: float | None, unit: str) -> float | None:
+    """Return an SI value in a unit, with no more digits than it takes to read it back."""
+    return None if value is None else units.render(value, unit)
+
+
+def _energy_terms(row: Mapping[str, Any], *, known: bool) -> Row:
+    """Return what the row's energy stands at; nothing where it has none."""
+    kind, kelvin = row["calorific_value_kind"], row["combustion_reference_temperature_K"]
+    return {
+        "calorific_value_kind": kind if known else None,
+        "combustion_reference_temperature_degC": _in(kelvin, "degC") if known else None,
+    }
 
 
 def remarks(what: str, rows: Sequence[Mapping[str, Any]]) -> str:
     """Return what the figures of a table stand at, in one sentence or two."""
-    if what == "totals" and rows:
-        bases = {(row["base_pressure_kPa"], row["base_temperature_degC"]) for row in rows}
-        known = sorted((p, t) for p, t in bases if p is not None and t is not None)
-        at = " or ".join(f"{p:g} kPa and {t:g} degC" for p, t in known) or "several conditions"
-        return f"Base volume at {at}; measured time only, never scaled up; {NO_UNCERTAINTY}."
-    if what == "balances" and rows:
-        return f"in = out + vented + imbalance; storage is not configured; {NO_UNCERTAINTY}."
-    return ""
+    rule = {
+        "totals": "measured time only, never scaled up",
+        "balances": "in = out + vented + imbalance; storage is not configured",
+    }
+    if what not in rule or not rows:
+        return ""
+    text = f"{_stand_at(rows)}{rule[what]}; {NO_UNCERTAINTY}."
+    return text[0].upper() + text[1:] if text.startswith("base") else text
+
+
+def _stand_at(rows: Sequence[Mapping[str, Any]]) -> str:
+    """Return the base conditions and the meaning of energy of all rows that have them."""
+    bases = _sets(rows, "base_pressure_kPa", "base_temperature_degC")
+    energies = _sets(rows, "calorific_value_kind", "combustion_reference_temperature_degC")
+    text = ""
+    if bases:
+        text += f"base volume at {' or '.join(f'{p:g} kPa and {t:g} degC' for p, t in bases)}; "
+    if energies:
+        kinds = " or ".join(f"{kind}, combustion reference {t:g} degC" for kind, t in energies)
+        text += f"energy: {kinds}; "
+    return text
+
+
+def _sets(rows: Sequence[Mapping[str, Any]], *names: str) -> list[tuple[Any, ...]]:
+    """Return the different sets of values under the names, those not known left out."""
+    found = {tuple(row[name] for name in names) for row in rows}
+    return sorted(values for values in found if None not in values)

@@ -12,12 +12,19 @@ from meterfix.calc.balance.envelopes import DayBalance, Verdict, day_balance
 from meterfix.calc.balance.months import DayFigures, MonthBalance, month_balance
 from meterfix.model.calendar import SECOND, GasDayCalendar
 from meterfix.model.site import Envelope
-from meterfix.run.figures import BASIS, Row
+from meterfix.run.figures import BASIS, Row, terms_of
 from meterfix.run.settle import Settled, Settling
+from meterfix.run.signals import SiteIndex
 from meterfix.store.values import encode_array
 
 Key = tuple[str, str, str, str]
 """Kind, envelope, quantity, gas day (a month's first)."""
+
+BASE_TERMS = ("base_pressure_Pa", "base_temperature_K")
+ENERGY_TERMS = ("calorific_value_kind", "combustion_reference_temperature_K")
+ALL_TERMS = (*BASE_TERMS, *ENERGY_TERMS)
+TERMS = {"base_volume": BASE_TERMS, "energy": ENERGY_TERMS}
+"""The columns that a balance of this quantity needs to have a meaning; the others are empty."""
 
 
 @dataclass
@@ -98,7 +105,10 @@ class Balances:
         )
         standing = [(meter, book.days.get((meter, day))) for meter in meters]
         links = [[meter, None if one is None else one.revision] for meter, one in standing]
-        return {**day_row(balance, start, calendar.end(day), day), "links": json.dumps(links)}
+        return {
+            **day_row(self.settling.index, balance, day),
+            "links": json.dumps(links),
+        }
 
     def _month(self, name: str, quantity: str, month: date) -> Row | None:
         calendar = self.settling.index.site.calendar
@@ -150,8 +160,12 @@ def meters_of(envelope: Envelope) -> tuple[str, ...]:
     return (*envelope.inflow, *envelope.outflow, *envelope.vented)
 
 
-def day_row(balance: DayBalance, start: int, end: int, day: date) -> Row:
+def day_row(index: SiteIndex, balance: DayBalance, day: date) -> Row:
     """Return an envelope's balance of a gas day as a row, without its status and links."""
+    calendar = index.site.calendar
+    start = calendar.start(day)
+    stands_at = terms_of(index, start)
+    needed = TERMS.get(balance.quantity, ())
     more = {
         "input": balance.reason,
         "hours": balance.hourly_verdict.reason,
@@ -161,9 +175,10 @@ def day_row(balance: DayBalance, start: int, end: int, day: date) -> Row:
         "envelope": balance.envelope,
         "kind": "gas_day",
         "period_start_us": start,
-        "period_end_us": end,
+        "period_end_us": calendar.end(day),
         "gas_day": day.isoformat(),
         "quantity": balance.quantity,
+        **{name: stands_at[name] if name in needed else None for name in ALL_TERMS},
         "storage_change": balance.storage_change,
         "measured_fraction": balance.measured_fraction,
         "hourly": encode_array(balance.hourly),
@@ -191,6 +206,7 @@ def month_row(
                 vented=row["vented"],
                 imbalance=row["imbalance"],
                 tolerance=row["tolerance"],
+                base=_base(row),
             )
             for row in days
         ],
@@ -204,6 +220,8 @@ def month_row(
         "period_end_us": end,
         "gas_day": month.isoformat(),
         "quantity": quantity,
+        **_common(days, BASE_TERMS),
+        **_common(days, ENERGY_TERMS),
         "storage_change": None,
         "measured_fraction": balance.measured_fraction,
         "hourly": None,
@@ -233,6 +251,18 @@ def _figures(balance: DayBalance | MonthBalance, more: Mapping[str, Any]) -> Row
         "significant": _answer(balance.significant),
         "reason": json.dumps({k: v for k, v in reasons.items() if v}, sort_keys=True),
     }
+
+
+def _base(row: Mapping[str, Any]) -> tuple[float, float] | None:
+    pressure, temperature = row["base_pressure_Pa"], row["base_temperature_K"]
+    return None if pressure is None else (pressure, temperature)
+
+
+def _common(rows: Sequence[Mapping[str, Any]], names: Sequence[str]) -> Row:
+    """Return what all the rows hold under the names; nothing known if they differ."""
+    found = {tuple(row[name] for name in names) for row in rows}
+    values = found.pop() if len(found) == 1 else (None,) * len(names)
+    return dict(zip(names, values, strict=True))
 
 
 def _answer(verdict: Verdict) -> str:

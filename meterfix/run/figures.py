@@ -9,7 +9,15 @@ from datetime import date
 from typing import Any
 
 from meterfix.calc.totals import PeriodTotal, month_total
-from meterfix.frames import CALCULATION_VERSION, FLAGS, HOURLY_COLUMNS, MISSING, HourlyRecord
+from meterfix.frames import (
+    CALCULATION_VERSION,
+    FLAGS,
+    HOURLY_COLUMNS,
+    MISSING,
+    TOTALS,
+    HourlyRecord,
+)
+from meterfix.model.calendar import SECOND
 from meterfix.run.signals import SiteIndex
 from meterfix.store.values import decode_array, encode_array
 
@@ -17,10 +25,17 @@ Row = dict[str, Any]
 
 FIGURES = ("mass_kg", "line_volume_m3", "base_volume_m3", "energy_J")
 BASIS = "measured"
+ABSENT = "absent"
+"""In a month's `missing`, beside the names of `frames.MISSING`: seconds of gas days without a row.
+Measured time, lost time and absent time add up to the month's duration."""
 
 
-def total_figures(total: PeriodTotal) -> Row:
-    """Return the columns of a total that hold its figures."""
+def total_figures(total: PeriodTotal, absent: float = 0.0) -> Row:
+    """Return the columns of a total that hold its figures.
+
+    `absent` is the time of a month's gas days that have no figures at all [s].
+    """
+    missing = {**total.lost, ABSENT: absent}
     return {
         "duration_s": total.duration,
         "measured_time_s": total.measured_time,
@@ -34,10 +49,11 @@ def total_figures(total: PeriodTotal) -> Row:
             {
                 "shares": {k: v for k, v in total.flag_shares.items() if v},
                 "without_flow": all(v is None for v in total.flag_shares.values()),
+                "without": {k: v for k, v in total.without.items() if v},
                 "disputed_readings": total.disputed_readings,
             }
         ),
-        "missing": _json({k: v for k, v in total.lost.items() if v}),
+        "missing": _json({k: v for k, v in missing.items() if v}),
     }
 
 
@@ -56,6 +72,7 @@ def total_from(row: Mapping[str, Any]) -> PeriodTotal:
         measured_fraction=row["measured_fraction"],
         flag_shares={name: flags["shares"].get(name, nothing) for name, _ in FLAGS},
         lost={name: lost.get(name, 0.0) for name, _ in MISSING},
+        without={name: flags["without"].get(name, 0.0) for name in TOTALS},
         disputed_readings=flags["disputed_readings"],
     )
 
@@ -71,31 +88,34 @@ def day_row(index: SiteIndex, meter: str, gas_day: date, total: PeriodTotal, dig
         "period_end_us": calendar.end(gas_day),
         "gas_day": gas_day.isoformat(),
         **total_figures(total),
-        **_terms(index, start),
+        **terms_of(index, start),
         "input_digest": digest,
     }
 
 
 def month_row(index: SiteIndex, meter: str, month: date, days: Sequence[Mapping[str, Any]]) -> Row:
-    """Return the row of a month from its gas days' rows; days without a row count as missing."""
+    """Return the row of a month from its gas days' rows; days without a row are absent."""
     calendar = index.site.calendar
     all_days = calendar.month_days(month)
     start, end = calendar.start(all_days[0]), calendar.end(all_days[-1])
-    duration = (end - start) / 1e6
+    duration = (end - start) / SECOND
     total = month_total([total_from(row) for row in days])
     total = replace(total, duration=duration, measured_fraction=total.measured_time / duration)
+    present = sum(row["period_end_us"] - row["period_start_us"] for row in days)
+    terms = terms_of(index, calendar.start(date.fromisoformat(days[-1]["gas_day"])))
     bases = {(row["base_pressure_Pa"], row["base_temperature_K"]) for row in days}
     if len(bases) > 1:
         # volumes at different base conditions do not add up; mass and energy do
         total = replace(total, base_volume=None)
+        terms |= {"base_pressure_Pa": None, "base_temperature_K": None}
     return {
         "meter": meter,
         "kind": "month",
         "period_start_us": start,
         "period_end_us": end,
         "gas_day": month.isoformat(),
-        **total_figures(total),
-        **_terms(index, calendar.start(date.fromisoformat(days[-1]["gas_day"]))),
+        **total_figures(total, (end - start - present) / SECOND),
+        **terms,
         "input_digest": _json([[row["gas_day"], row["input_digest"]] for row in days]),
     }
 
@@ -137,6 +157,7 @@ def same_figures(one: Mapping[str, Any], other: Mapping[str, Any]) -> bool:
         "base_pressure_Pa",
         "base_temperature_K",
         "calorific_value_kind",
+        "combustion_reference_temperature_K",
     )
     return all(one[name] == other[name] for name in names)
 
@@ -152,7 +173,8 @@ def version_columns(index: SiteIndex, as_of_pass: int, as_of_delivery: int, mark
     }
 
 
-def _terms(index: SiteIndex, instant: int) -> Row:
+def terms_of(index: SiteIndex, instant: int) -> Row:
+    """Return the columns that say what volumes and energies of a gas day stand at."""
     base = index.site.base_conditions.in_force(instant)
     energy = index.site.contract.energy
     if base is None:
@@ -162,6 +184,9 @@ def _terms(index: SiteIndex, instant: int) -> Row:
         "base_pressure_Pa": base.base_pressure,
         "base_temperature_K": base.base_temperature,
         "calorific_value_kind": energy.kind.value if energy is not None else "",
+        "combustion_reference_temperature_K": (
+            energy.combustion_reference_temperature if energy is not None else None
+        ),
     }
 
 

@@ -385,7 +385,7 @@ class _Figures:
         index = self.sites[row["site_digest"]]
         envelope = next(e for e in index.site.envelopes if e.name == row["envelope"])
         day = date.fromisoformat(row["gas_day"])
-        start, end = index.site.calendar.start(day), index.site.calendar.end(day)
+        start = index.site.calendar.start(day)
         records: dict[str, HourlyRecord | None] = {
             meter: None if revision is None else hourly_from(hours[meter, row["gas_day"], revision])
             for meter, revision in json.loads(row["links"])
@@ -393,7 +393,7 @@ class _Figures:
         balance = day_balance(
             envelope, row["quantity"], records, envelope.tolerance.in_force(start)
         )
-        return balance_day_row(balance, start, end, day)
+        return balance_day_row(index, balance, day)
 
     def _month_balance(self, row: Row, days: Mapping[tuple[str, str, str, int], Row]) -> Row:
         return balance_month_row(

@@ -28,7 +28,7 @@ volume_base = { pressure = "101.325 kPa", temperature = "15 degC" }
 ENVELOPE = """
 [envelope.line]
 in = ["FT-1"]
-out = []
+out = ["FT-2"]
 vented = []
 quantities = ["mass", "base_volume", "energy"]
 tolerance = "1 %"
@@ -56,48 +56,53 @@ def stored(folder, table, **where):
     return [row for row in rows if all(row[k] == v for k, v in where.items())]
 
 
-@pytest.fixture
-def part_energy(one_meter, hour_log):
+def two_meters(folder, *tables):
+    """Give a one-meter site a second meter on the same signals, and more tables."""
+    text = folder.site.read_text(encoding="utf-8")
+    meter = text[text.index("[meter.FT-1]") :]
+    added = (meter.replace("meter.FT-1", "meter.FT-2"), *tables)
+    folder.site.write_text("\n".join((text, *added)), encoding="utf-8")
+
+
+@pytest.fixture(scope="module")
+def part_energy(new_one_meter, hour_log):
     """Three hours of 2026-10-02, a calorific value from the third on, and an envelope."""
-    text = one_meter.site.read_text(encoding="utf-8")
-    one_meter.site.write_text(text + ENERGY + SINCE_NINE + ENVELOPE, encoding="utf-8")
+    folder = new_one_meter()
+    two_meters(folder, ENERGY, SINCE_NINE, ENVELOPE)
     for number in (7, 8, 9):
-        one_meter.log(f"FT-1_{number:02d}.csv", hour_log(number))
-    one_meter.process(AFTER)
-    return one_meter
+        folder.log(f"FT-1_{number:02d}.csv", hour_log(number))
+    folder.process(AFTER)
+    return folder
 
 
-@pytest.fixture
-def two_bases(one_meter, hour_log):
-    """Gas day 2026-10-01 at 60 degF, 2026-10-02 at 15 degC, each with readings throughout."""
-    text = one_meter.site.read_text(encoding="utf-8")
+@pytest.fixture(scope="module")
+def two_bases(new_one_meter, hour_log):
+    """Gas day 2026-10-01 at 60 degF, 2026-10-02 at 15 degC, each bridged throughout."""
+    folder = new_one_meter()
+    text = folder.site.read_text(encoding="utf-8")
     assert BASE in text
     text = text.replace(BASE, CHANGED_BASE).replace('maximum_gap = "10 min"', 'maximum_gap = "2 d"')
-    text = text.replace("[site.atmo", "\n[site.atmo")
-    quantities = ENVELOPE.replace(', "energy"', "")
-    one_meter.site.write_text(text + quantities, encoding="utf-8")
-    first = hour_log(7).replace("2026-10-02T07", "2026-10-01T06")
-    last = hour_log(6).replace("2026-10-02T06", "2026-10-03T06")
-    one_meter.log("FT-1_00.csv", first)
-    one_meter.log("FT-1_01.csv", last)
-    one_meter.process(AFTER)
-    return one_meter
+    folder.site.write_text(text, encoding="utf-8")
+    two_meters(folder, ENVELOPE.replace(', "energy"', ""))
+    folder.log("FT-1_00.csv", hour_log(7).replace("2026-10-02T07", "2026-10-01T06"))
+    folder.log("FT-1_01.csv", hour_log(6).replace("2026-10-02T06", "2026-10-03T06"))
+    folder.process(AFTER)
+    return folder
 
 
 def test_energy_of_a_part_of_the_day_is_not_shown_as_the_day_s(part_energy):
     """A calorific value from the third hour on: no energy of the day and month, and for how long.
 
-    06:54 to 07:54 by the log's rows is 07:00 to 08:54; the measured seconds before 09:00 are
-    those without energy. Mass and base volume stand.
+    The two measured hours before are those without energy. Mass and base volume stand.
     """
-    hours = part_energy.json("totals", "--by", "hour")
+    hours = part_energy.json("totals", "--by", "hour", "--meter", "FT-1")
     known = [hour for hour in hours if hour["energy_MJ"] is not None]
     assert [hour["period_start"] for hour in known] == ["2026-10-02T09:00:00Z"]
     lacking = [hour for hour in hours if hour["mass_kg"] is not None and hour["energy_MJ"] is None]
     seconds = math.fsum(hour["measured_fraction"] * 3600.0 for hour in lacking)
     assert seconds == 7200.0
     for by in ("gas-day", "month"):
-        (row,) = part_energy.json("totals", "--by", by)
+        (row,) = part_energy.json("totals", "--by", by, "--meter", "FT-1")
         assert row["mass_kg"] > 0
         assert row["base_volume_m3"] > 0
         assert row["energy_MJ"] is None
@@ -145,17 +150,18 @@ def test_base_volumes_at_two_base_conditions_have_no_month(two_bases):
     why = "the base conditions change within the period"
     assert volume["beyond_tolerance"] == f"cannot be judged: {why}"
     assert why in volume["reason"]
-    assert (volume["base_pressure_kPa"], volume["base_temperature_degC"]) == (101.325, None)
+    assert (volume["base_pressure_kPa"], volume["base_temperature_degC"]) == (None, None)
     assert months["mass"]["in"] > 0
     assert why not in months["mass"]["reason"]
-    (total,) = two_bases.json("totals", "--by", "month")
+    (total,) = two_bases.json("totals", "--by", "month", "--meter", "FT-1")
     assert (total["base_volume_m3"], total["base_temperature_degC"]) == (None, None)
     assert f"base volume: {why}" in total["reason"]
 
 
 def test_a_base_temperature_reads_back(two_bases):
     """60 degF is shown in degC with the digits that it takes to read it back, and no fewer."""
-    (row,) = stored(two_bases, "total_revision", kind="gas_day", gas_day="2026-10-01")
+    where = {"meter": "FT-1", "kind": "gas_day", "gas_day": "2026-10-01"}
+    (row,) = stored(two_bases, "total_revision", **where)
     assert row["base_temperature_K"] == units.parse("60 degF", "temperature")
     for what in ("totals", "balances"):
         rows = [r for r in two_bases.json(what) if r["gas_day"] == "2026-10-01"]
@@ -185,7 +191,7 @@ def test_measured_lost_and_absent_time_add_up(works, part_energy, two_bases):
 
 def test_a_month_s_reason_names_gaps_and_absent_days(part_energy):
     """A gap on one gas day does not hide the thirty that have no figures at all."""
-    (row,) = part_energy.json("totals", "--by", "month")
+    (row,) = part_energy.json("totals", "--by", "month", "--meter", "FT-1")
     assert "missing differential pressure" in row["reason"]
     assert f"gas days without readings or not yet over {30 * 86400.0!r} s" in row["reason"]
     assert f"not yet over {30 * 86400} s" in " ".join(
@@ -222,6 +228,7 @@ def test_energy_totals_say_their_combustion_reference(works):
 def test_balances_stand_at_what_was_in_force_when_stored(own_works):
     """A later edit of the site file does not change what stored figures are said to stand at."""
     before = own_works.json("balances")
+    assert {row["base_temperature_degC"] for row in before} == {None, 15.0}
     text = own_works.site.read_text(encoding="utf-8")
     edited = text.replace('temperature = "15 degC"', 'temperature = "20 degC"', 1)
     assert edited != text

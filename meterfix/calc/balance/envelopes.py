@@ -13,7 +13,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import date
 from enum import StrEnum
-from math import floor, fsum, isnan
+from math import fsum, isnan
 
 import numpy as np
 
@@ -41,11 +41,11 @@ class Answer(StrEnum):
 
 @dataclass(frozen=True, slots=True)
 class Verdict:
-    """An answer, and why there is none."""
+    """An answer, and why there is none, or on what part of the period it rests."""
 
     answer: Answer
     reason: str = ""
-    """'' for yes and no."""
+    """'' for a yes or no about the whole period."""
 
     def __str__(self) -> str:
         return f"{self.answer}: {self.reason}" if self.reason else str(self.answer)
@@ -68,7 +68,7 @@ class DayBalance:
     hourly_verdict: Verdict
     """Of every hour, for both questions."""
     inflow: float | None
-    """kg, m3 or J over measured time; None if a meter has none at all. So are the next two."""
+    """kg, m3 or J over measured time; None if a meter has no total. So are the next two."""
     outflow: float | None
     vented: float | None
     storage_change: float | None
@@ -76,7 +76,7 @@ class DayBalance:
     imbalance: float | None
     """None unless every input is complete."""
     tolerance: float | None
-    """In the quantity's unit; None if there is none or its base is not known."""
+    """In the quantity's unit; None if there is none or the input is not complete."""
     significant: Verdict
     beyond_tolerance: Verdict
     measured_fraction: float
@@ -103,20 +103,21 @@ class _Input:
         return float(self.record.statistics[hour, HOURLY_INDEX[name]])
 
 
-def _percent(fraction: float) -> str:
-    """Return a fraction in percent, cut and not rounded, so that 100 % means all of it."""
-    return f"{floor(fraction * 10_000) / 100:.2f} %"
+def _lack(meter: str, *, fraction: float | None, without: float, quantity: str) -> str:
+    """Return what a meter's input lacks, '' if nothing.
 
-
-def _lack(meter: str, *, fraction: float | None, has_value: bool, quantity: str) -> str:
-    """Return what a meter's input lacks, '' if nothing."""
+    `fraction` is the measured one, None without a record; `without` the measured time that has
+    no such quantity [s].
+    """
     if fraction is None:
         return f"{meter} (no record)"
+    parts = []
     if fraction < 1.0:
-        return f"{meter} ({_percent(fraction)} measured)"
-    if not has_value:
-        return f"{meter} (no {quantity.replace('_', ' ')})"
-    return ""
+        parts.append(f"{100.0 * fraction!r} % measured")
+    if without > 0.0:
+        name = quantity.replace("_", " ")
+        parts.append(f"no {name} for {without!r} s of the measured time")
+    return f"{meter} ({', '.join(parts)})" if parts else ""
 
 
 def _reason(lacks: list[str]) -> str:
@@ -198,7 +199,7 @@ def day_balance(
             _lack(
                 entry.meter,
                 fraction=None if entry.total is None else entry.total.measured_fraction,
-                has_value=not any(isnan(entry.hour(quantity, hour)) for hour in range(hours)),
+                without=0.0 if entry.total is None else entry.total.without[quantity],
                 quantity=quantity,
             )
             for entry in inputs
@@ -208,7 +209,7 @@ def day_balance(
     inflow, outflow, vented = (_sum(group) for group in values)
     imbalance = None if lack or not inputs else _imbalance(inflow, outflow, vented)
     limit = None
-    if tolerance is not None and inflow is not None:
+    if tolerance is not None and inflow is not None and not lack:
         limit = tolerance.fraction_of_in * inflow
     return DayBalance(
         envelope=envelope.name,
@@ -252,7 +253,7 @@ def _hour(groups: list[list[_Input]], quantity: str, hour: int) -> tuple[list[fl
                 _lack(
                     entry.meter,
                     fraction=fraction,
-                    has_value=not isnan(value),
+                    without=entry.hour("measured_time", hour) if isnan(value) else 0.0,
                     quantity=quantity,
                 )
             )

@@ -14,7 +14,7 @@ class PeriodTotal:
     """The totals of one meter over a gas day or a month; measured time only, never scaled up."""
 
     mass: float | None
-    """kg; None where no hour has it. So are the other totals."""
+    """kg; None unless all the measured time has it, and where none is. So are the other totals."""
     line_volume: float | None
     """m3."""
     base_volume: float | None
@@ -33,13 +33,19 @@ class PeriodTotal:
     """Share of the flow time, by the names of `frames.FLAGS`; None without flow."""
     lost: Mapping[str, float]
     """s, by the names of `frames.MISSING`."""
+    without: Mapping[str, float]
+    """Measured time of the hours that have no such total [s], by the names of `frames.TOTALS`."""
     disputed_readings: int
 
 
-def _sum_of_known(values: Iterable[float | None]) -> float | None:
-    """Return the exactly rounded sum of the known values; None if there is none."""
+def _sum(values: Iterable[float | None], without: float) -> float | None:
+    """Return the exactly rounded sum of the known values; None if measured time is without one.
+
+    A part of a total looks like the whole of it: where some of the measured time has no number,
+    the period has none.
+    """
     known = [value for value in values if value is not None and not isnan(value)]
-    return fsum(known) + 0.0 if known else None
+    return fsum(known) + 0.0 if known and without == 0.0 else None
 
 
 def _shares(
@@ -63,11 +69,13 @@ def _fraction(measured_time: float, duration: float) -> float:
 
 
 def day_total(record: HourlyRecord) -> PeriodTotal:
-    """Return a gas day's total: fsum over its hours, those without a number left out.
+    """Return a gas day's total: fsum over its hours, those without measured time left out.
 
     Parameters
     ----------
     record : HourlyRecord
+        An hour that is measured but has no number (NaN), as energy without a calorific value,
+        takes the day's total of that name with it; `without` says how long that is.
 
     Returns
     -------
@@ -78,8 +86,13 @@ def day_total(record: HourlyRecord) -> PeriodTotal:
         values: list[float] = record.statistics[:, HOURLY_INDEX[name]].tolist()
         return values
 
-    totals = {name: _sum_of_known(column(name)) for name in TOTALS}
-    duration, measured_time = fsum(column("duration")), fsum(column("measured_time"))
+    times = column("measured_time")
+    without = {
+        name: fsum(time for value, time in zip(column(name), times, strict=True) if isnan(value))
+        for name in TOTALS
+    }
+    totals = {name: _sum(column(name), without[name]) for name in TOTALS}
+    duration, measured_time = fsum(column("duration")), fsum(times)
     return PeriodTotal(
         mass=totals["mass"],
         line_volume=totals["line_volume"],
@@ -91,6 +104,7 @@ def day_total(record: HourlyRecord) -> PeriodTotal:
         measured_fraction=_fraction(measured_time, duration),
         flag_shares=_shares(column("flow_time"), lambda name: column(f"share_{name}")),
         lost={name: fsum(column(f"lost_{name}")) for name, _ in MISSING},
+        without=without,
         disputed_readings=int(fsum(column("disputed_readings"))),
     )
 
@@ -101,13 +115,15 @@ def month_total(days: Sequence[PeriodTotal]) -> PeriodTotal:
     Parameters
     ----------
     days : sequence of PeriodTotal
-        Totals of the gas days; one without a total is left out of that sum.
+        Totals of the gas days; one that is not measured at all is left out of the sums, one that
+        is measured but has no total takes the month's with it.
 
     Returns
     -------
     PeriodTotal
     """
-    totals = {name: _sum_of_known(getattr(day, name) for day in days) for name in TOTALS}
+    without = {name: fsum(day.without[name] for day in days) for name in TOTALS}
+    totals = {name: _sum((getattr(day, name) for day in days), without[name]) for name in TOTALS}
     duration = fsum(day.duration for day in days)
     measured_time = fsum(day.measured_time for day in days)
     return PeriodTotal(
@@ -124,5 +140,6 @@ def month_total(days: Sequence[PeriodTotal]) -> PeriodTotal:
             lambda name: [day.flag_shares[name] for day in days],
         ),
         lost={name: fsum(day.lost[name] for day in days) for name, _ in MISSING},
+        without=without,
         disputed_readings=sum(day.disputed_readings for day in days),
     )
