@@ -28,7 +28,8 @@ class SiteFileError(MeterfixError):
         self.path = path
         self.mistakes = mistakes
         listed = "\n".join(f"  {mistake}" for mistake in mistakes)
-        super().__init__(f"{path}: {len(mistakes)} mistake(s)\n{listed}")
+        plural = "" if len(mistakes) == 1 else "s"
+        super().__init__(f"{path}: {len(mistakes)} mistake{plural}\n{listed}")
 
 
 class UnitError(MeterfixError):

@@ -32,7 +32,7 @@ class Problem:
     line: int
     """1-based line in the file; 0 for the whole file."""
     cell: str
-    """Column header; '' for the whole line."""
+    """Column header or tag; '' for the whole line."""
     reason: str
     """A sentence that names what was given and what was expected."""
     text: bytes
@@ -41,18 +41,21 @@ class Problem:
 
 @dataclass(frozen=True, slots=True)
 class Cells:
-    """The good cells of one column of one file, in file order.
+    """The good cells of one column, or of one tag, of one file, in file order.
 
     Instants are canonical: an interval's start for interval-stamped sources. Values are SI
     (gauge pressures stay gauge, rooted cells stay fractions of full scale).
     """
 
     column: str
+    """Header of the column, or the tag."""
     instants: Instants
     values: Floats
     lines: Integers
     implausible: Truths
     """Accepted, but outside the column's plausible range."""
+    doubtful: Truths
+    """Accepted, but the log itself calls its quality doubtful."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,6 +110,8 @@ class Series:
     excluded: tuple[Excluded, ...] = ()
     mean_values: bool = False
     """Cells hold means over their interval."""
+    doubtful: Truths | None = None
+    """Readings whose quality the log calls doubtful; None: none of them."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,6 +131,8 @@ class Era:
     differential_pressure_range: Transmitter
     static_pressure_range: Transmitter | None
     temperature_range: Transmitter | None
+    barometer: str | None = None
+    """Name of the barometer's signal; None where there is none."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -164,6 +171,8 @@ FLAGS: tuple[tuple[str, str], ...] = (
     ("disputed_reading", "two sources disagree on a reading that was used"),
     ("carried_value", "static pressure or temperature was carried or interpolated to the dp"),
     ("mean_of_differential_pressure", "dp is a mean over an interval: its root is biased high"),
+    ("doubtful_quality", "a value was used that its log calls doubtful by a quality code"),
+    ("calorific_value_outside_limits", "composition outside the limits of ISO 6976:2016"),
 )
 """Flags: condition on a record's flow; the hourly record holds each one's share of flow time."""
 
@@ -225,6 +234,32 @@ its start (the last may be short). Times in s. NaN: not known, or no reading to 
 HOURLY_INDEX: dict[str, int] = {name: n for n, name in enumerate(HOURLY_COLUMNS)}
 
 
+SENSITIVE = ("mass", "base_volume", "energy")
+"""Totals that sensitivities and variances are given for; kg, m3, J."""
+
+PARAMETERS: tuple[tuple[str, str, str], ...] = (
+    ("differential_pressure_zero", "signal", "Pa added to every dp (after unrooting)"),
+    ("differential_pressure_span", "signal", "relative change of every dp"),
+    ("static_pressure_zero", "signal", "Pa added to every static pressure"),
+    ("static_pressure_span", "signal", "relative change of the reading as logged"),
+    ("temperature_zero", "signal", "K added to every temperature"),
+    ("atmospheric_pressure", "atmosphere", "Pa added to the atmospheric pressure"),
+    ("bore", "device", "relative change of the bore"),
+    ("pipe_diameter", "device", "relative change of the pipe diameter"),
+    ("discharge_coefficient", "device", "stated standard uncertainties of C"),
+    ("expansibility", "device", "stated standard uncertainties of the expansibility"),
+    ("dynamic_viscosity", "gas", "relative change"),
+    ("isentropic_exponent", "gas", "relative change"),
+    ("line_density", "gas", "stated standard uncertainties of the line model's density"),
+    ("base_density", "gas", "stated standard uncertainties of the base model's density"),
+    ("calorific_value", "gas", "relative change of the energy per base volume or mass"),
+    ("calorific_method", "gas", "stated standard uncertainties of ISO 6976's calorific value"),
+)
+"""Parameters of a meter: name, kind of subject (a signal's name; 'barometer SIGNAL' or 'site' for
+the atmosphere; 'METER LABEL' for a device; a gas's name), and what one unit of it is. Beside them
+'fraction:COMPONENT' of a gas: that component's fraction before normalising, as stated."""
+
+
 @dataclass(frozen=True, slots=True)
 class HourlyRecord:
     """The result for one meter and gas day; totals of the day are fsum over its rows."""
@@ -236,3 +271,12 @@ class HourlyRecord:
     """(hours, len(HOURLY_COLUMNS))."""
     unsolved: tuple[int, ...] = ()
     """Instants [UTC us] of records for which the flow equation did not converge."""
+    parameters: tuple[tuple[str, str], ...] = ()
+    """What `sensitivities` are with respect to: name of `PARAMETERS` (or 'fraction:COMPONENT')
+    and subject, sorted. A parameter of another transmitter, plate or gas is another one."""
+    sensitivities: Floats | None = None
+    """(hours, len(parameters), len(SENSITIVE)): signed derivatives of the hour's totals; 0 where
+    nothing was measured, NaN where a parameter counts in stated uncertainties and the hour has a
+    flow for which none is stated."""
+    random_variance: Floats | None = None
+    """(hours, len(SENSITIVE)): variance of the hour's totals from what does not repeat."""

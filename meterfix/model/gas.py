@@ -61,6 +61,8 @@ class DensityModel:
 
     model: StateModel
     fixed_compression_factor: float | None = None
+    relative_standard_uncertainty: float | None = None
+    """Of the density, as the site file states it [-]; None: as the model's own source does."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,10 +78,13 @@ class PropertyChoice:
 
 @dataclass(frozen=True, slots=True)
 class CalorificValue:
-    """A fixed calorific value of the contract, with everything that gives it its meaning."""
+    """A calorific value, with everything that gives it its meaning.
 
-    value: float
-    """J/m3 (volume basis) or J/kg (mass basis)."""
+    Fixed by the contract, or computed from the composition by ISO 6976:2016.
+    """
+
+    value: float | None
+    """J/m3 (volume basis) or J/kg (mass basis); None: computed by ISO 6976:2016."""
     basis: CalorificBasis
     kind: CalorificKind
     combustion_reference_temperature: float

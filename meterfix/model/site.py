@@ -6,9 +6,10 @@ from dataclasses import dataclass
 from enum import StrEnum
 
 from meterfix.model.calendar import GasDayCalendar
-from meterfix.model.device import OrificePlate
+from meterfix.model.device import Device
 from meterfix.model.gas import BaseConditions, CalorificBasis, CalorificKind, Gas
 from meterfix.model.source import Signal, Source
+from meterfix.model.uncertainty import Repeatability, UncertaintySource
 from meterfix.model.versions import Versions
 
 
@@ -42,7 +43,7 @@ class Atmosphere:
 class MeterTerms:
     """What a meter is over one interval of time; signals and gas by name."""
 
-    device: OrificePlate
+    device: Device
     gas: str
     differential_pressure: str
     static_pressure: str
@@ -118,6 +119,10 @@ class Site:
     meters: tuple[Meter, ...]
     envelopes: tuple[Envelope, ...]
     contract: Contract
+    uncertainty: tuple[UncertaintySource, ...]
+    """Every source, those that follow from standards included; independent of each other."""
+    repeatability: tuple[Repeatability, ...]
+    """Signals without one: estimated from successive differences."""
     database_url: str
     """SQLAlchemy URL; relative SQLite paths are already made absolute beside the site file."""
     archive_folder: str

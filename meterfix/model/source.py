@@ -55,11 +55,41 @@ class RepeatedHour(StrEnum):
     later one."""
 
 
+class LayoutKind(StrEnum):
+    """What a row of a log is."""
+
+    WIDE = "wide"
+    """A row per time, with a column per quantity."""
+    TAGS = "tags"
+    """A row per tag and time; tags come at their own rates."""
+
+
+class Use(StrEnum):
+    """What becomes of a value, by the quality code beside it."""
+
+    GOOD = "good"
+    DOUBTFUL = "doubtful"
+    """Used, with a flag."""
+    BAD = "bad"
+    """Set aside."""
+
+
+@dataclass(frozen=True, slots=True)
+class Quality:
+    """One quality code of a tag log, verbatim, and what the site file says it means."""
+
+    code: str
+    use: Use
+    meaning: str
+    """'' for a good one."""
+
+
 @dataclass(frozen=True, slots=True)
 class Column:
-    """One column of a wide log: its header text and what its cells mean."""
+    """One column of a wide log, or one tag of a tag log, and what its cells mean."""
 
     header: str
+    """The column's header text, or the tag, verbatim."""
     quantity: Quantity
     holds: Holds
     scale: float
@@ -71,6 +101,7 @@ class Column:
     """True: the cell is the root of dp already, as a fraction of its full-scale value (after
     scale and offset); the transmitter's range turns it back into dp."""
     required: bool
+    """Of a wide log: a file without it is rejected."""
     plausible_minimum: float
     """SI; a value outside the plausible range is accepted with a flag."""
     plausible_maximum: float
@@ -96,6 +127,7 @@ class Layout:
     hour_24: bool
     """True: 24:00 is the next day's 00:00."""
     columns: tuple[Column, ...]
+    """The declared columns of a wide log, the declared tags of a tag log."""
     ignored_columns: tuple[str, ...]
     bad_values: tuple[tuple[str, str], ...]
     """Texts that stand for a bad value, and their meaning."""
@@ -104,6 +136,16 @@ class Layout:
     """UTC us; older instants are set aside."""
     size_limit: int
     """Bytes, after decompression."""
+    kind: LayoutKind = LayoutKind.WIDE
+    tag_column: str = ""
+    """Header of the column that names the tag; '' in a wide log, as all that follow."""
+    value_column: str = ""
+    quality_column: str = ""
+    """'' if the log has none."""
+    qualities: tuple[Quality, ...] = ()
+    """Every code that may stand in the quality column."""
+    ignored_tags: tuple[str, ...] = ()
+    """Tags whose lines are skipped."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,7 +177,7 @@ class Source:
 
 @dataclass(frozen=True, slots=True)
 class Origin:
-    """Where a signal's readings come from: source, file binding ('' if none), column header."""
+    """Where a signal's readings come from: source, file binding ('' if none), column or tag."""
 
     source: str
     binding: str
