@@ -8,7 +8,7 @@ import numpy as np
 
 from meterfix.calc.elementary import contiguous, power
 from meterfix.calc.primary.discharge import DischargeTerms
-from meterfix.calc.primary.orifice import discharge_terms, expansibility
+from meterfix.calc.primary.forms import discharge_terms, expansibility
 from meterfix.frames import Floats, Integers, Truths
 
 LOWEST_REYNOLDS_NUMBER = 500.0
@@ -46,7 +46,7 @@ def solve_flow(
     pipe_diameter: Floats,
     terms: DischargeTerms,
 ) -> Flow:
-    """Solve the flow equation for the mass flow, with C a polynomial in Re_D ** -0.1.
+    """Solve the flow equation for the mass flow, with C a sum of powers of Re_D ** -0.1.
 
     With X = Re_D / C, which does not depend on C, the equation is C(u) X u^10 = 1. Five Newton
     steps from C = 0.6 are taken for every record, so that no record's bits depend on another.
@@ -96,6 +96,10 @@ def solve_flow(
             u10 = u3 * u3 * u4
             C = terms.constant + u3 * (terms.c3 + u4 * (terms.c7 + u * (terms.c8 + u3 * terms.c11)))
             slope = u3 * (c3_3 + u4 * (c7_7 + u * (c8_8 + u3 * c11_11)))  # u dC/du
+            if terms.c5 is not None and terms.c23_2 is not None:
+                u5, broken = u4 * u, u3 * u3 * np.sqrt(u) * terms.c23_2
+                C = C + u5 * (terms.c5 + broken)
+                slope = slope + u5 * (5 * terms.c5 + 11.5 * broken)
             u = u - u * (C - 1.0 / (X * u10)) / (10.0 * C + slope)
         C = terms.at(u)
         reynolds_number = C * X
@@ -113,7 +117,7 @@ def solve_flow(
     )
 
 
-def orifice_flow(
+def device_flow(
     *,
     differential_pressure: Floats,
     static_pressure: Floats,
@@ -122,9 +126,10 @@ def orifice_flow(
     isentropic_exponent: Floats,
     bore: Floats,
     pipe_diameter: Floats,
-    tappings: Integers,
+    form: Integers,
+    calibrated: Floats | None = None,
 ) -> Flow:
-    """Return the flow of a gas through orifice plates, one plate per record.
+    """Return the flow of a gas through primary devices, one device per record.
 
     Parameters
     ----------
@@ -136,8 +141,10 @@ def orifice_flow(
         Of the gas at the upstream tapping. [kg/m3], [Pa s], [-]
     bore, pipe_diameter : (n,) arrays
         At working conditions. [m]
-    tappings : (n,) integer array
-        Codes, see `meterfix.calc.primary.orifice.TAPPINGS_CODES`.
+    form : (n,) integer array
+        Codes, see `meterfix.calc.primary.forms.FORM_CODES`.
+    calibrated : (n,) array
+        Discharge coefficient from a certificate; NaN, or None for all: the standard's. [-]
 
     Returns
     -------
@@ -151,7 +158,8 @@ def orifice_flow(
 
     References
     ----------
-    .. [1] ISO 5167-2:2003, 5.3.
+    .. [1] ISO 5167-2:2003, 5.3; ISO 5167-3:2003, 5.1.6, 5.2.6 and 5.3.4; ISO 5167-4:2003, 5.5
+       and 5.6.
     """
     *given, codes = np.broadcast_arrays(
         *(
@@ -164,13 +172,14 @@ def orifice_flow(
                 isentropic_exponent,
                 bore,
                 pipe_diameter,
+                np.nan if calibrated is None else calibrated,
             )
         ),
-        np.atleast_1d(tappings),
+        np.atleast_1d(form),
     )
     count = len(codes)
     parts = [
-        _orifice_chunk(*(np.ascontiguousarray(v[at : at + _CHUNK]) for v in (*given, codes)))
+        _chunk(*(np.ascontiguousarray(v[at : at + _CHUNK]) for v in (*given, codes)))
         for at in range(0, count, _CHUNK)
     ]
     if not parts:
@@ -185,7 +194,7 @@ def orifice_flow(
     )
 
 
-def _orifice_chunk(
+def _chunk(
     differential_pressure: Floats,
     static_pressure: Floats,
     density: Floats,
@@ -193,7 +202,8 @@ def _orifice_chunk(
     isentropic_exponent: Floats,
     bore: Floats,
     pipe_diameter: Floats,
-    tappings: Integers,
+    calibrated: Floats,
+    form: Integers,
 ) -> Flow:
     """Return the flow of one chunk of contiguous arrays."""
     return solve_flow(
@@ -205,8 +215,11 @@ def _orifice_chunk(
             static_pressure,
             isentropic_exponent,
             diameter_ratio=bore / pipe_diameter,
+            form=form,
         ),
         bore=bore,
         pipe_diameter=pipe_diameter,
-        terms=discharge_terms(bore=bore, pipe_diameter=pipe_diameter, tappings=tappings),
+        terms=discharge_terms(
+            bore=bore, pipe_diameter=pipe_diameter, form=form, calibrated=calibrated
+        ),
     )

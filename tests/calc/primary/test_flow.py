@@ -9,7 +9,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from meterfix.calc.primary.discharge import DischargeTerms
-from meterfix.calc.primary.flow import Flow, orifice_flow, solve_flow
+from meterfix.calc.primary.flow import Flow, device_flow, solve_flow
 from meterfix.calc.primary.orifice import (
     discharge_coefficient,
     expansibility,
@@ -40,7 +40,7 @@ def random_inputs(count: int, seed: int) -> Inputs:
         "isentropic_exponent": draw.uniform(1.1, 1.6, count),
         "bore": beta * D,
         "pipe_diameter": D,
-        "tappings": draw.integers(0, 3, count),
+        "form": draw.integers(0, 3, count),
     }
 
 
@@ -53,7 +53,7 @@ def reynolds_outside(flow: Flow, inputs: Inputs) -> np.ndarray:
         flow.reynolds_number,
         bore=inputs["bore"],
         pipe_diameter=inputs["pipe_diameter"],
-        tappings=inputs["tappings"],
+        tappings=inputs["form"],
     )
 
 
@@ -64,7 +64,7 @@ def test_ten_thousand_plates_against_a_reference_library() -> None:
     of the discharge coefficient begins below the limits of use.
     """
     inputs = random_inputs(11_000, seed=1)
-    flow = orifice_flow(**inputs)
+    flow = device_flow(**inputs)
     inside = np.flatnonzero(~reynolds_outside(flow, inputs))[:10_000]
     assert len(inside) == 10_000
     names = ("corner", "D", "flange")
@@ -88,14 +88,14 @@ def test_residual_on_a_hundred_thousand_plates() -> None:
     The residual is taken anew with the equation itself at the Reynolds number found.
     """
     inputs = random_inputs(100_000, seed=2)
-    flow = orifice_flow(**inputs)
+    flow = device_flow(**inputs)
     inside = ~reynolds_outside(flow, inputs)
     assert inside.sum() > 99_000
     assert flow.converged[inside].all()
     point = some(inputs, inside)
     d, D = point["bore"], point["pipe_diameter"]
     reynolds = 4.0 * flow.mass_flow[inside] / (np.pi * point["dynamic_viscosity"] * D)
-    C = discharge_coefficient(reynolds, bore=d, pipe_diameter=D, tappings=point["tappings"])
+    C = discharge_coefficient(reynolds, bore=d, pipe_diameter=D, tappings=point["form"])
     epsilon = expansibility(
         point["differential_pressure"],
         point["static_pressure"],
@@ -114,9 +114,9 @@ def test_bits_do_not_depend_on_the_batch(size: int) -> None:
     inputs = random_inputs(20_000, seed=3)
     inputs["differential_pressure"][::97] = 0.0
     inputs["density"][::89] = np.nan
-    whole = orifice_flow(**inputs)
+    whole = device_flow(**inputs)
     for first in range(0, 20_000, 20_000 // 200 if size < 1000 else size):
-        part = orifice_flow(**some(inputs, slice(first, first + size)))
+        part = device_flow(**some(inputs, slice(first, first + size)))
         for name in FIELDS:
             expected = getattr(whole, name)[first : first + size]
             assert getattr(part, name).tobytes() == expected.tobytes()
@@ -125,14 +125,14 @@ def test_bits_do_not_depend_on_the_batch(size: int) -> None:
 def test_strided_and_broadcast_inputs_have_the_same_bits() -> None:
     """A reversed view and a single plate against many records give the same bits."""
     inputs = random_inputs(5_000, seed=4)
-    forward = orifice_flow(**inputs).mass_flow
-    backward = orifice_flow(**some(inputs, slice(None, None, -1))).mass_flow
+    forward = device_flow(**inputs).mass_flow
+    backward = device_flow(**some(inputs, slice(None, None, -1))).mass_flow
     assert backward[::-1].tobytes() == forward.tobytes()
-    plate = {name: inputs[name][:1] for name in ("bore", "pipe_diameter", "tappings")}
+    plate = {name: inputs[name][:1] for name in ("bore", "pipe_diameter", "form")}
     repeated = {name: np.repeat(values, 5_000) for name, values in plate.items()}
     assert (
-        orifice_flow(**(inputs | plate)).mass_flow.tobytes()
-        == orifice_flow(**(inputs | repeated)).mass_flow.tobytes()
+        device_flow(**(inputs | plate)).mass_flow.tobytes()
+        == device_flow(**(inputs | repeated)).mass_flow.tobytes()
     )
 
 
@@ -141,7 +141,7 @@ def test_zero_differential_pressure_is_exactly_no_flow() -> None:
     inputs = random_inputs(2, seed=5)
     inputs["differential_pressure"][:] = 0.0
     inputs["density"][1] = np.nan
-    flow = orifice_flow(**inputs)
+    flow = device_flow(**inputs)
     assert flow.mass_flow.tobytes() == np.zeros(2).tobytes()
     assert flow.reynolds_number.tolist() == [0.0, 0.0]
     assert flow.converged.all()
@@ -151,12 +151,12 @@ def test_zero_differential_pressure_is_exactly_no_flow() -> None:
 def test_below_reynolds_500_there_is_no_number() -> None:
     """Just above Re_D = 500 there is a flow, just below there is none: NaN, not converged."""
     inputs = some(random_inputs(1, seed=6), np.zeros(400, dtype=np.int64))
-    reference = orifice_flow(**inputs).reynolds_number[0]
+    reference = device_flow(**inputs).reynolds_number[0]
     # the viscosity moves Re_D from about 3 to about 5 million times smaller than it was
     inputs["dynamic_viscosity"] = inputs["dynamic_viscosity"] * np.geomspace(
         reference / 5000.0, reference / 50.0, 400
     )
-    flow = orifice_flow(**inputs)
+    flow = device_flow(**inputs)
     known = ~np.isnan(flow.mass_flow)
     assert known[0]
     assert not known[-1]
@@ -174,9 +174,9 @@ def test_below_reynolds_500_there_is_no_number() -> None:
 def test_unknown_input_gives_no_number(name: str) -> None:
     """NaN in gives NaN out and not converged, never zero, and the neighbours are untouched."""
     inputs = random_inputs(3, seed=7)
-    clean = orifice_flow(**inputs).mass_flow
+    clean = device_flow(**inputs).mass_flow
     inputs[name][1] = np.nan
-    flow = orifice_flow(**inputs)
+    flow = device_flow(**inputs)
     assert np.isnan(flow.mass_flow[1])
     assert flow.converged.tolist() == [True, False, True]
     assert flow.mass_flow[[0, 2]].tobytes() == clean[[0, 2]].tobytes()
@@ -185,14 +185,14 @@ def test_unknown_input_gives_no_number(name: str) -> None:
 def test_negative_differential_pressure_gives_no_number() -> None:
     """The solver knows no reverse flow: NaN, not converged."""
     inputs = random_inputs(1, seed=8)
-    flow = orifice_flow(**(inputs | {"differential_pressure": np.array([-100.0])}))
+    flow = device_flow(**(inputs | {"differential_pressure": np.array([-100.0])}))
     assert np.isnan(flow.mass_flow[0])
     assert not flow.converged[0]
 
 
 def test_no_records() -> None:
     """No records in, no records out."""
-    flow = orifice_flow(**some(random_inputs(1, seed=9), slice(0, 0)))
+    flow = device_flow(**some(random_inputs(1, seed=9), slice(0, 0)))
     assert all(len(getattr(flow, name)) == 0 for name in FIELDS)
 
 
@@ -201,8 +201,8 @@ def test_flow_grows_with_dp(seed: int, factor: float) -> None:
     """Within the limits more dp is more mass flow."""
     inputs = random_inputs(20, seed=seed)
     dp = np.minimum(inputs["differential_pressure"] / 4.0, 0.05 * inputs["static_pressure"])
-    lower = orifice_flow(**(inputs | {"differential_pressure": dp})).mass_flow
-    higher = orifice_flow(**(inputs | {"differential_pressure": dp * factor})).mass_flow
+    lower = device_flow(**(inputs | {"differential_pressure": dp})).mass_flow
+    higher = device_flow(**(inputs | {"differential_pressure": dp * factor})).mass_flow
     known = ~np.isnan(lower)
     assert (higher[known] > lower[known]).all()
 
@@ -215,8 +215,8 @@ def test_flow_scales(seed: int, factor: float) -> None:
     """
     inputs = random_inputs(20, seed=seed)
     names = ("differential_pressure", "static_pressure", "density", "dynamic_viscosity")
-    scaled = orifice_flow(**(inputs | {name: inputs[name] * factor for name in names}))
-    flow = orifice_flow(**inputs)
+    scaled = device_flow(**(inputs | {name: inputs[name] * factor for name in names}))
+    flow = device_flow(**inputs)
     known = flow.converged & scaled.converged
     assert scaled.mass_flow[known] == pytest.approx(factor * flow.mass_flow[known], rel=1e-12)
     assert scaled.reynolds_number[known] == pytest.approx(flow.reynolds_number[known], rel=1e-12)
