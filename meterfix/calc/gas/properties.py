@@ -4,15 +4,23 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from meterfix.calc.elementary import contiguous
-from meterfix.calc.gas.calorific import energy_factor
-from meterfix.calc.gas.composition import single_component
+from meterfix.calc.gas.calorific import (
+    ComputedValue,
+    computed_value,
+    energy_factor,
+    stated_or_computed,
+)
+from meterfix.calc.gas.composition import MoleFractions, mole_fractions, single_component
 from meterfix.calc.gas.equations import SIMPLIFIED, equation_of_state
 from meterfix.calc.gas.pure import PureGas
 from meterfix.calc.gas.state import EquationOfState, not_known
+from meterfix.calc.gas.stated_uncertainty import COVERAGE_FACTOR, density_relative_uncertainty
 from meterfix.calc.gas.tiles import Bound, PropertyTiles
 from meterfix.errors import GasError
 from meterfix.frames import Floats, Truths
@@ -26,6 +34,9 @@ from meterfix.model.gas import (
     StateModel,
 )
 from meterfix.model.site import EnergyTerms
+
+if TYPE_CHECKING:
+    from meterfix.calc.gas.gradients import CompositionGradients
 
 EQUATION_OF_STATE = "equation_of_state"
 IDEAL_GAS = "ideal_gas"
@@ -56,6 +67,34 @@ class LineState:
     """No gas phase there: every property is NaN. False with NaN: the state is not known."""
 
 
+@dataclass(frozen=True, slots=True)
+class LineSlopes:
+    """Derivatives of line states, (n,) arrays: per Pa, and per K, the other constant."""
+
+    log_density_by_pressure: Floats
+    log_density_by_temperature: Floats
+    isentropic_exponent_by_pressure: Floats
+    isentropic_exponent_by_temperature: Floats
+    joule_thomson_coefficient: Floats
+    """Its value [K/Pa]; 0, as its derivatives, where it was not asked for."""
+    joule_thomson_by_pressure: Floats
+    """K/Pa per Pa."""
+    joule_thomson_by_temperature: Floats
+    log_viscosity_by_pressure: Floats
+    log_viscosity_by_temperature: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class TileRows:
+    """Which row of a gas's property tiles is what; None: it is not tiled."""
+
+    compression_factor: int | None
+    joule_thomson_coefficient: int | None
+    isentropic_exponent: int | None
+    dynamic_viscosity: int | None
+    count: int
+
+
 class GasProperties:
     """The properties of one gas as its terms say; made by a `GasLibrary`.
 
@@ -66,6 +105,8 @@ class GasProperties:
         compression factor.
     molar_mass
         Of the line model [kg/mol].
+    tiles, rows
+        The property tiles, None where no property needs them, and what their rows are.
     """
 
     def __init__(
@@ -82,8 +123,10 @@ class GasProperties:
         self.molar_mass = line.molar_mass
         self._line = line
         self._base = base
-        self._tiles = tiles
+        self.tiles = tiles
+        self.rows = _rows(terms)
         self._base_densities: dict[BaseConditions, float] = {}
+        self._fractions_by_model: dict[StateModel, MoleFractions] = {}
 
     def line_state(self, static_pressure: Floats, temperature: Floats) -> LineState:
         """Return the gas's properties at line conditions.
@@ -102,7 +145,7 @@ class GasProperties:
         p, T = contiguous(static_pressure), contiguous(temperature)
         known = ~not_known(p, T)
         usable = known & np.isfinite(p) & np.isfinite(T) & (p > 0.0) & (T > 0.0)
-        tiled = () if self._tiles is None else self._tiles.evaluate(p, T)
+        tiled = () if self.tiles is None else self.tiles.evaluate(p, T)
         rows: Iterator[Floats] = iter(tiled)
         terms = self.terms
         if terms.line_model.model in SIMPLIFIED:
@@ -125,6 +168,88 @@ class GasProperties:
             outside_range=self._line.outside_range(p, T),
             no_gas=known & ~gas,
         )
+
+    def line_slopes(
+        self,
+        static_pressure: Floats,
+        temperature: Floats,
+        compression_factor: Floats,
+        *,
+        throttled: bool,
+    ) -> LineSlopes:
+        """Return the derivatives of the properties that `line_state` gives.
+
+        Parameters
+        ----------
+        static_pressure, temperature : (n,) arrays
+            Absolute pressure [Pa] and temperature [K] of states where there is gas.
+        compression_factor : (n,) array
+            What `line_state` gives there [-].
+        throttled : bool
+            Whether the Joule-Thomson coefficient and its derivatives are wanted.
+
+        Returns
+        -------
+        LineSlopes
+            Of the very polynomials that give the properties.
+        """
+        p, T = contiguous(static_pressure), contiguous(temperature)
+        nothing = np.zeros(len(p))
+        rows = (
+            self.rows.compression_factor,
+            self.rows.isentropic_exponent,
+            self.rows.joule_thomson_coefficient if throttled else None,
+            self.rows.dynamic_viscosity,
+        )
+        wanted = tuple(row for row in rows if row is not None)
+        found: list[tuple[Floats, Floats]] = [(nothing, nothing)] * len(rows)
+        joule_thomson = nothing
+        if self.tiles is not None and wanted:
+            slopes = self.tiles.slopes(p, T, wanted)
+            for n, row in enumerate(rows):
+                if row is not None:
+                    found[n] = slopes[wanted.index(row)][0], slopes[wanted.index(row)][1]
+            if rows[2] is not None or rows[3] is not None:
+                values = self.tiles.evaluate(p, T)
+                if rows[2] is not None:
+                    joule_thomson = values[rows[2]]
+                if rows[3] is not None:
+                    found[3] = found[3][0] / values[rows[3]], found[3][1] / values[rows[3]]
+        (Z_p, Z_T), (kappa_p, kappa_T), (jt_p, jt_T), (mu_p, mu_T) = found
+        return LineSlopes(
+            log_density_by_pressure=1.0 / p - Z_p / compression_factor,
+            log_density_by_temperature=-1.0 / T - Z_T / compression_factor,
+            isentropic_exponent_by_pressure=kappa_p,
+            isentropic_exponent_by_temperature=kappa_T,
+            joule_thomson_coefficient=joule_thomson,
+            joule_thomson_by_pressure=jt_p,
+            joule_thomson_by_temperature=jt_T,
+            log_viscosity_by_pressure=mu_p,
+            log_viscosity_by_temperature=mu_T,
+        )
+
+    def line_density_uncertainty(self, static_pressure: Floats, temperature: Floats) -> Floats:
+        """Return the stated relative standard uncertainty of the line density.
+
+        NaN where nothing is stated; see `stated_uncertainty`.
+        """
+        return self._density_uncertainty(self.terms.line_model, static_pressure, temperature)
+
+    def base_density_uncertainty(self, base: BaseConditions) -> float:
+        """Return the stated relative standard uncertainty of the base density; NaN if none is."""
+        return float(
+            self._density_uncertainty(
+                self.terms.base_model,
+                contiguous(base.base_pressure),
+                contiguous(base.base_temperature),
+            )[0]
+        )
+
+    def _density_uncertainty(self, model: DensityModel, p: Floats, T: Floats) -> Floats:
+        if model.relative_standard_uncertainty is not None:
+            return np.full(len(p), model.relative_standard_uncertainty)
+        fractions = mole_fractions(self.terms.composition, model.model)
+        return density_relative_uncertainty(model.model, fractions, p, T) / COVERAGE_FACTOR
 
     def base_density(self, base: BaseConditions) -> float:
         """Return the density at base conditions by the base model's exact equation [kg/m3].
@@ -156,10 +281,51 @@ class GasProperties:
         Raises
         ------
         GasError
-            If the gas states no calorific value or one of another kind; see
-            `calorific.energy_factor`.
+            If the gas states no calorific value or one of another kind, or ISO 6976:2016 cannot
+            compute it; see `calorific.energy_factor` and `calorific.computed_value`.
         """
-        return energy_factor(self.terms.calorific_value, energy, base, self.base_density)
+        value = self.terms.calorific_value
+        if value is not None:
+            value = stated_or_computed(value, self._fractions)
+        return energy_factor(value, energy, base, self.base_density)
+
+    def computed_calorific_value(self) -> ComputedValue | None:
+        """Return the calorific value by ISO 6976:2016; None where it is stated, or there is none.
+
+        Raises
+        ------
+        GasError
+            As `calorific.computed_value`.
+        """
+        return self._computed
+
+    @cached_property
+    def _computed(self) -> ComputedValue | None:
+        # milliseconds, and asked for by every meter-day
+        value = self.terms.calorific_value
+        if value is None or value.value is not None:
+            return None
+        return computed_value(value, self._fractions)
+
+    @cached_property
+    def _fractions(self) -> MoleFractions:
+        """The mole fractions, with the base model's molar masses."""
+        return mole_fractions(self.terms.composition, self.terms.base_model.model)
+
+
+def _rows(terms: GasTerms) -> TileRows:
+    """Return what the rows of the gas's tiles are, in the order in which `_tiles` makes them."""
+    exact = terms.line_model.model not in SIMPLIFIED
+    first = 2 if exact else 0
+    kappa = terms.isentropic_exponent.method is not None
+    viscosity = terms.dynamic_viscosity.method is not None
+    return TileRows(
+        compression_factor=0 if exact else None,
+        joule_thomson_coefficient=1 if exact else None,
+        isentropic_exponent=first if kappa else None,
+        dynamic_viscosity=first + kappa if viscosity else None,
+        count=first + kappa + viscosity,
+    )
 
 
 def _stated_or_next(choice: PropertyChoice, rows: Iterator[Floats], count: int) -> Floats:
@@ -170,10 +336,12 @@ class GasLibrary:
     """Gas properties by their terms; owned by its caller, so that nothing is global.
 
     Gases whose density model, composition and methods agree share their tiles. Tiles live as
-    long as the library, within one version of the calculation; they are never stored.
+    long as the library, within one version of the calculation; they are never stored. Nor are
+    its gases' derivatives by composition, `gradients`, see `gradients.gradients_of`.
     """
 
     def __init__(self) -> None:
+        self.gradients: dict[tuple[GasTerms, tuple[str, ...]], CompositionGradients] = {}
         self._properties: dict[GasTerms, GasProperties] = {}
         self._equations: dict[tuple[Composition, DensityModel], EquationOfState] = {}
         self._tiles: dict[
