@@ -8,24 +8,26 @@ no flow.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, fields
-from itertools import pairwise
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from meterfix.calc.gas.properties import GasLibrary, GasProperties
-from meterfix.calc.primary.flow import Flow, orifice_flow
-from meterfix.calc.primary.orifice import (
-    LOWEST_PRESSURE_RATIO,
-    geometry_outside_limits,
-    pressure_loss,
-    reynolds_number_outside_limits,
+from meterfix.calc.disturbance import (
+    Disturbance,
+    Disturbed,
+    discharge_standard_uncertainty,
+    disturbed,
+    expansibility_standard_uncertainty,
 )
-from meterfix.calc.primary.plates import Plates, plates_of
+from meterfix.calc.gas.batch import BatchStates, GasBatch
+from meterfix.calc.gas.properties import GasLibrary
+from meterfix.calc.primary.devices import Devices, devices_of
+from meterfix.calc.primary.flow import Flow, device_flow
+from meterfix.calc.primary.forms import LOWEST_PRESSURE_RATIO, pressure_loss
 from meterfix.frames import FLAGS, MISSING, Era, Floats, Integers, Truths
-from meterfix.model.gas import BaseConditions, CalorificBasis, GasTerms
-from meterfix.model.site import EnergyTerms, Tapping, Thermometer
+from meterfix.model.gas import CalorificBasis
+from meterfix.model.site import Tapping, Thermometer
 
 FLAG_BITS: dict[str, np.uint32] = {name: np.uint32(1 << n) for n, (name, _) in enumerate(FLAGS)}
 """The bit of each flag in `Corrected.flags`, in the order of `frames.FLAGS`."""
@@ -98,87 +100,11 @@ class Corrected:
     """`MEASURED`, or why the record is not: an index in `frames.MISSING`."""
 
 
-@dataclass(frozen=True, slots=True)
-class _States:
-    """Line states of records that are ordered by gas; as the gas library gives them."""
-
-    density: Floats
-    compression_factor: Floats
-    isentropic_exponent: Floats
-    joule_thomson_coefficient: Floats
-    dynamic_viscosity: Floats
-    outside_range: Truths
-    no_gas: Truths
-
-
-class _Gases:
-    """The gases of a batch, each evaluated once per distinct set of terms."""
-
-    def __init__(self, library: GasLibrary) -> None:
-        self._library = library
-        self._numbers: dict[GasTerms, int] = {}
-        self._seen: dict[int, tuple[GasTerms, int]] = {}
-        self._properties: list[GasProperties] = []
-        self._base_densities: dict[tuple[int, BaseConditions], float] = {}
-        self._factors: dict[
-            tuple[int, BaseConditions, EnergyTerms], tuple[float, CalorificBasis]
-        ] = {}
-
-    def number(self, terms: GasTerms) -> int:
-        """Return the number by which this batch knows the gas; equal terms share one."""
-        # hashing a composition costs more than looking its object up; the object is kept so
-        # that its id cannot pass to another one
-        known = self._seen.get(id(terms))
-        if known is None:
-            number = self._numbers.get(terms)
-            if number is None:
-                number = len(self._properties)
-                self._numbers[terms] = number
-                self._properties.append(self._library.properties(terms))
-            known = (terms, number)
-            self._seen[id(terms)] = known
-        return known[1]
-
-    def simplified(self, era: Era) -> bool:
-        """Return whether the era's line density is from the ideal gas or a fixed Z."""
-        return self._properties[self.number(era.gas)].simplified
-
-    def base_density(self, era: Era) -> float:
-        """Return the density at the era's base conditions [kg/m3]."""
-        key = (self.number(era.gas), era.base)
-        if key not in self._base_densities:
-            self._base_densities[key] = self._properties[key[0]].base_density(era.base)
-        return self._base_densities[key]
-
-    def energy_factor(self, era: Era) -> tuple[float, CalorificBasis]:
-        """Return the era's energy per base volume [J/m3] or mass [J/kg]; NaN if it has none."""
-        if era.energy is None or era.gas.calorific_value is None:
-            return float("nan"), CalorificBasis.MASS
-        key = (self.number(era.gas), era.base, era.energy)
-        if key not in self._factors:
-            self._factors[key] = self._properties[key[0]].energy_factor(era.base, era.energy)
-        return self._factors[key]
-
-    def line_states(self, gas: Integers, static_pressure: Floats, temperature: Floats) -> _States:
-        """Return the states of records in ascending order of their gas's number."""
-        edges = np.searchsorted(gas, np.arange(len(self._properties) + 1))
-        parts = [
-            self._properties[n].line_state(static_pressure[a:b], temperature[a:b])
-            for n, (a, b) in enumerate(pairwise(edges.tolist()))
-            if b > a
-        ]
-        if not parts:
-            nothing, never = np.zeros(0), np.zeros(0, dtype=np.bool_)
-            return _States(nothing, nothing, nothing, nothing, nothing, never, never)
-        return _States(
-            *(
-                np.concatenate([np.asarray(getattr(part, field.name)) for part in parts])
-                for field in fields(_States)
-            )
-        )
-
-
-def correct(records: Sequence[EraRecords], gases: GasLibrary) -> Corrected:
+def correct(
+    records: Sequence[EraRecords],
+    gases: GasLibrary,
+    disturbances: Sequence[Disturbance | None] | None = None,
+) -> Corrected:
     """Correct the records of many meters and eras.
 
     Parameters
@@ -187,6 +113,8 @@ def correct(records: Sequence[EraRecords], gases: GasLibrary) -> Corrected:
         One entry per meter and era, in any order; SI.
     gases : GasLibrary
         Gives the properties of the eras' gases.
+    disturbances : sequence of (Disturbance or None), optional
+        What is changed, entry by entry of `records`; None: nothing.
 
     Returns
     -------
@@ -201,7 +129,7 @@ def correct(records: Sequence[EraRecords], gases: GasLibrary) -> Corrected:
     Raises
     ------
     ValueError
-        If a plate is impossible (bore not between 0 and the pipe diameter).
+        If a device is impossible (bore not between 0 and the pipe diameter).
     GasError
         If a gas cannot be computed at all, has no gas state at base conditions, or states a
         calorific value of a kind that the contract does not allow.
@@ -209,12 +137,15 @@ def correct(records: Sequence[EraRecords], gases: GasLibrary) -> Corrected:
     References
     ----------
     .. [1] ISO 5167-1:2003, 5.4 (density and temperature at the upstream tapping) and
-       ISO 5167-2:2003, 5.3 (limits of use, flow equation).
+       ISO 5167-2, -3 and -4:2003 (limits of use, flow equation).
     """
-    batch = _Gases(gases)
+    batch = GasBatch(gases)
     # readings may be NaN, infinite or absurd: what comes of them is sorted out by value
     with np.errstate(invalid="ignore", over="ignore", divide="ignore"):
-        blocks = [_correct_block(block, batch) for block in _blocks(records)]
+        blocks = [
+            _correct_block(records[a:b], batch, None if disturbances is None else disturbances[a:b])
+            for a, b in _blocks(records)
+        ]
     joined = {
         field.name: np.concatenate([getattr(block, field.name) for block in blocks])
         for field in fields(Corrected)
@@ -223,16 +154,16 @@ def correct(records: Sequence[EraRecords], gases: GasLibrary) -> Corrected:
     return Corrected(offsets=_offsets(records), **joined)
 
 
-def _blocks(records: Sequence[EraRecords]) -> Iterator[Sequence[EraRecords]]:
-    """Yield consecutive eras with about `_BLOCK` records; one empty block of no eras."""
+def _blocks(records: Sequence[EraRecords]) -> Iterator[tuple[int, int]]:
+    """Yield [first, end) of consecutive eras of about `_BLOCK` records; one of no eras."""
     first = count = 0
     for n, entry in enumerate(records):
         count += len(entry.differential_pressure)
         if count >= _BLOCK:
-            yield records[first : n + 1]
+            yield first, n + 1
             first, count = n + 1, 0
     if first < len(records) or not records:
-        yield records[first:]
+        yield first, len(records)
 
 
 def _offsets(records: Sequence[EraRecords]) -> Integers:
@@ -241,11 +172,16 @@ def _offsets(records: Sequence[EraRecords]) -> Integers:
     return offsets
 
 
-def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
+def _correct_block(
+    records: Sequence[EraRecords],
+    gases: GasBatch,
+    disturbances: Sequence[Disturbance | None] | None,
+) -> Corrected:
     offsets = _offsets(records)
     eras = [entry.era for entry in records]
     lengths = np.diff(offsets)
     count = int(offsets[-1])
+    changed = disturbed(disturbances, lengths)
 
     def spread(constant: Callable[[Era], float | None]) -> Floats:
         """Return a constant of each era, one per record; NaN for None."""
@@ -265,19 +201,25 @@ def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
         dp_lower + logged_dp * np.abs(logged_dp) * (dp_upper - dp_lower),
         logged_dp,
     )
+    logged_pressure = _joined([entry.static_pressure for entry in records])
+    gauge = told(lambda era: era.static_pressure_gauge)
+    atmosphere = np.where(gauge, _atmospheric_pressure(records), 0.0)
+    temperature = _joined([entry.temperature for entry in records]).copy()
+    if changed is not None:
+        dp = changed.moved(dp, "differential_pressure")
+        logged_pressure = changed.moved(logged_pressure, "static_pressure")
+        atmosphere = np.where(gauge, changed.added(atmosphere, "atmospheric_pressure"), 0.0)
+        temperature = changed.added(temperature, "temperature_zero")
+
     cut_off = spread(lambda era: era.meter.low_flow_cut_off)
     known_dp = np.isfinite(dp)
     still = known_dp & ((np.abs(dp) < cut_off) | (dp == 0.0))
     reverse = known_dp & ~still & (dp < 0.0)
     forward = known_dp & ~still & (dp > 0.0)
 
-    logged_pressure = _joined([entry.static_pressure for entry in records])
-    gauge = told(lambda era: era.static_pressure_gauge)
-    atmosphere = np.where(gauge, _atmospheric_pressure(records), 0.0)
     at_tapping = logged_pressure + atmosphere
     downstream = told(lambda era: era.meter.static_pressure_tapping is Tapping.DOWNSTREAM)
     static_pressure = np.where(downstream, at_tapping + dp, at_tapping)
-    temperature = _joined([entry.temperature for entry in records]).copy()
 
     missing = np.full(count, MEASURED, dtype=np.int64)
     possible = (at_tapping > 0.0) & (static_pressure > dp) & (temperature > 0.0)
@@ -295,13 +237,16 @@ def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
     gas = np.repeat(np.array([gases.number(era.gas) for era in eras], dtype=np.int64), lengths)
     flowing = np.flatnonzero(forward & (missing == MEASURED))
     flowing = flowing[np.argsort(gas[flowing], kind="stable")]
-    plates = plates_of([era.meter.device for era in eras], lengths).chosen(flowing)
+    devices = devices_of([era.meter.device for era in eras], lengths).chosen(flowing)
+    moved = None if changed is None else changed.chosen(flowing)
+    if moved is not None:
+        devices = moved.devices(devices)
     p1, dp_flowing = static_pressure[flowing], dp[flowing]
     far = told(lambda era: era.meter.thermometer is Thermometer.DOWNSTREAM)[flowing]
     T1 = _temperature_upstream(
-        gases, gas[flowing], far, dp_flowing, p1, temperature[flowing], plates
+        gases, gas[flowing], far, dp_flowing, p1, temperature[flowing], devices, moved
     )
-    states, flow = _flow_at(gases, gas[flowing], dp_flowing, p1, T1, plates)
+    states, flow = _flow_at(gases, gas[flowing], dp_flowing, p1, T1, devices, moved)
 
     no_gas = states.no_gas | ~(states.density > 0.0)
     solved = flow.converged & ~no_gas
@@ -318,7 +263,11 @@ def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
     mass_flow = placed(flow.mass_flow, solved)
     mass_flow[still] = 0.0
     line_density = placed(states.density)
-    base_density = spread(gases.base_density)
+    stated_base = base_density = spread(gases.base_density)
+    if changed is not None:
+        base_density = changed.scaled(
+            stated_base, "base_density", lambda: spread(gases.base_density_uncertainty)
+        )
     line_volume_flow = mass_flow / line_density
     base_volume_flow = mass_flow / base_density
     line_volume_flow[still] = base_volume_flow[still] = 0.0
@@ -327,12 +276,25 @@ def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
     per_base_volume = np.repeat(
         np.array([basis is CalorificBasis.VOLUME for _, basis in factors], dtype=np.bool_), lengths
     )
-    energy_flow = np.where(per_base_volume, base_volume_flow, mass_flow) * np.repeat(
-        np.array([factor for factor, _ in factors], dtype=np.float64), lengths
-    )
+    factor = np.repeat(np.array([each for each, _ in factors], dtype=np.float64), lengths)
+    if changed is not None:
+        value_per_mass = told(
+            lambda era: (
+                era.gas.calorific_value is not None
+                and era.gas.calorific_value.basis is CalorificBasis.MASS
+            )
+        )
+        # the energy of an amount of gas is that of its own value, whatever the base density
+        heavier = base_density / stated_base
+        factor = np.where(per_base_volume & value_per_mass, factor * heavier, factor)
+        factor = np.where(~per_base_volume & ~value_per_mass, factor / heavier, factor)
+        factor = changed.scaled(factor, "calorific_value")
+        factor = changed.multiplied(
+            factor, "calorific_method", lambda: spread(gases.calorific_method_uncertainty)
+        )
+    energy_flow = np.where(per_base_volume, base_volume_flow, mass_flow) * factor
 
     flags = np.zeros(count, dtype=np.uint32)
-    bore, pipe_diameter = plates.bore, plates.pipe_diameter
     for name, condition in (
         (
             "pressure_ratio_outside_limits",
@@ -340,24 +302,15 @@ def _correct_block(records: Sequence[EraRecords], gases: _Gases) -> Corrected:
         ),
         (
             "reynolds_number_outside_limits",
-            reynolds_number_outside_limits(
-                flow.reynolds_number,
-                bore=bore,
-                pipe_diameter=pipe_diameter,
-                tappings=plates.tappings,
-            ),
+            devices.reynolds_number_outside_limits(flow.reynolds_number),
         ),
-        # the limits are judged at the plate's reference temperature, else a plate of exactly
-        # 12.5 mm would go in and out of them with the weather
-        (
-            "geometry_outside_limits",
-            geometry_outside_limits(bore=bore, pipe_diameter=pipe_diameter),
-        ),
+        ("geometry_outside_limits", devices.geometry_outside_limits()),
         ("gas_model_outside_range", states.outside_range),
         (
             "gas_model_simplified",
             told(gases.simplified)[flowing],
         ),
+        ("calorific_value_outside_limits", told(gases.calorific_value_outside)[flowing]),
         ("over_range", dp_flowing >= dp_upper[flowing]),
         ("signal_outside_range", _outside_ranges(records, lengths)[flowing]),
     ):
@@ -425,37 +378,65 @@ def _outside_ranges(records: Sequence[EraRecords], lengths: Integers) -> Truths:
 
 
 def _flow_at(
-    gases: _Gases,
+    gases: GasBatch,
     gas: Integers,
     differential_pressure: Floats,
     static_pressure: Floats,
     temperature: Floats,
-    plates: Plates,
-) -> tuple[_States, Flow]:
+    devices: Devices,
+    changed: Disturbed | None,
+) -> tuple[BatchStates, Flow]:
     """Return states and flows at the upstream tapping's pressure and temperature."""
     states = gases.line_states(gas, static_pressure, temperature)
-    bore, pipe_diameter = plates.diameters_at(temperature)
-    flow = orifice_flow(
-        differential_pressure=differential_pressure,
-        static_pressure=static_pressure,
-        density=states.density,
-        dynamic_viscosity=states.dynamic_viscosity,
-        isentropic_exponent=states.isentropic_exponent,
-        bore=bore,
-        pipe_diameter=pipe_diameter,
-        tappings=plates.tappings,
+    bore, pipe_diameter = devices.diameters_at(temperature)
+    if changed is not None:
+        density = changed.scaled(
+            states.density,
+            "line_density",
+            lambda: gases.line_density_uncertainty(gas, static_pressure, temperature),
+        )
+        states = replace(
+            states,
+            density=density,
+            compression_factor=states.compression_factor * (states.density / density),
+            isentropic_exponent=changed.scaled(states.isentropic_exponent, "isentropic_exponent"),
+            dynamic_viscosity=changed.scaled(states.dynamic_viscosity, "dynamic_viscosity"),
+        )
+
+    def solve(density: Floats) -> Flow:
+        return device_flow(
+            differential_pressure=differential_pressure,
+            static_pressure=static_pressure,
+            density=density,
+            dynamic_viscosity=states.dynamic_viscosity,
+            isentropic_exponent=states.isentropic_exponent,
+            bore=bore,
+            pipe_diameter=pipe_diameter,
+            form=devices.form,
+            calibrated=devices.calibrated,
+        )
+
+    if changed is None:
+        return states, solve(states.density)
+    return states, changed.flow(
+        solve,
+        states.density,
+        lambda flow: discharge_standard_uncertainty(devices, flow.reynolds_number),
+        lambda _: expansibility_standard_uncertainty(
+            devices, differential_pressure, static_pressure, states.isentropic_exponent
+        ),
     )
-    return states, flow
 
 
 def _temperature_upstream(
-    gases: _Gases,
+    gases: GasBatch,
     gas: Integers,
     far: Truths,
     differential_pressure: Floats,
     static_pressure: Floats,
     temperature: Floats,
-    plates: Plates,
+    devices: Devices,
+    changed: Disturbed | None,
 ) -> Floats:
     """Return the temperature at the upstream tapping [K].
 
@@ -471,12 +452,18 @@ def _temperature_upstream(
     if not far.any():
         return upstream
     dp, p1, measured = differential_pressure[far], static_pressure[far], temperature[far]
-    gas, plates = gas[far], plates.chosen(far)
+    gas, devices = gas[far], devices.chosen(far)
+    changed = None if changed is None else changed.chosen(far)
     T1 = measured
     for _ in range(_THERMOMETER_PASSES):
-        states, flow = _flow_at(gases, gas, dp, p1, T1, plates)
-        bore, pipe_diameter = plates.diameters_at(T1)
-        loss = pressure_loss(dp, flow.discharge_coefficient, diameter_ratio=bore / pipe_diameter)
+        states, flow = _flow_at(gases, gas, dp, p1, T1, devices, changed)
+        bore, pipe_diameter = devices.diameters_at(T1)
+        loss = pressure_loss(
+            dp,
+            flow.discharge_coefficient,
+            diameter_ratio=bore / pipe_diameter,
+            stated_ratio=devices.pressure_loss_ratio,
+        )
         # where the flow does not converge the last word is the final state's, not a NaN here
         loss = np.where(flow.converged, loss, 0.0)
         T1 = measured + states.joule_thomson_coefficient * loss

@@ -52,6 +52,10 @@ def segment_sum(values: Floats, starts: Integers, ends: Integers) -> Floats:
     -------
     (m,) array
     """
+    values = np.ascontiguousarray(values, dtype=np.float64)
+    covering = len(starts) > 0 and starts[0] == 0 and ends[-1] == len(values)
+    if covering and (ends > starts).all() and (starts[1:] == ends[:-1]).all():
+        return np.add.reduceat(values, starts)  # the same sums without a copy
     sums = np.zeros(len(starts))
     filled = np.flatnonzero(ends > starts)
     if len(filled) == 0:
@@ -60,6 +64,6 @@ def segment_sum(values: Floats, starts: Integers, ends: Integers) -> Floats:
     edges = np.empty(2 * len(filled), dtype=np.int64)
     edges[0::2] = starts[filled]
     edges[1::2] = ends[filled]
-    padded = np.append(np.ascontiguousarray(values, dtype=np.float64), 0.0)
+    padded = np.append(values, 0.0)
     sums[filled] = np.add.reduceat(padded, edges)[0::2]
     return sums

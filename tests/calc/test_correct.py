@@ -19,7 +19,7 @@ from meterfix.calc.correct import (
     EraRecords,
     correct,
 )
-from meterfix.calc.primary.flow import orifice_flow
+from meterfix.calc.primary.flow import device_flow
 from meterfix.calc.primary.orifice import pressure_loss
 from meterfix.frames import FLAGS, MISSING, Era
 from meterfix.model.device import OrificePlate, Tappings
@@ -48,7 +48,15 @@ GAS = GasTerms(
     isentropic_exponent=PropertyChoice(value=1.3),
     calorific_value=HEAT,
 )
-PLATE = OrificePlate(0.0924, 0.154, Tappings.FLANGE, 16e-6, 11e-6, 293.15, 293.15)
+PLATE = OrificePlate(
+    bore=0.0924,
+    pipe_diameter=0.154,
+    tappings=Tappings.FLANGE,
+    bore_expansion=16e-6,
+    pipe_expansion=11e-6,
+    bore_reference_temperature=293.15,
+    pipe_reference_temperature=293.15,
+)
 METER = MeterTerms(
     device=PLATE,
     gas="gas",
@@ -183,7 +191,7 @@ def test_plain_record_is_the_flow_equation() -> None:
     result = run(records([10_000.0, 20_000.0], p=2e6, T=310.0))
     warm = 310.0 - 293.15
     density = 2e6 / (500.0 * 310.0)
-    expected = orifice_flow(
+    expected = device_flow(
         differential_pressure=np.array([10_000.0, 20_000.0]),
         static_pressure=np.full(2, 2e6),
         density=np.full(2, density),
@@ -191,7 +199,7 @@ def test_plain_record_is_the_flow_equation() -> None:
         isentropic_exponent=np.full(2, 1.3),
         bore=np.full(2, 0.0924 * (1 + 16e-6 * warm)),
         pipe_diameter=np.full(2, 0.154 * (1 + 11e-6 * warm)),
-        tappings=np.full(2, 2),
+        form=np.full(2, 2),
     )
     assert result.mass_flow == pytest.approx(expected.mass_flow, rel=1e-14)
     assert result.discharge_coefficient == pytest.approx(expected.discharge_coefficient, rel=1e-14)

@@ -12,7 +12,16 @@ from meterfix.calc import correct as correction
 from meterfix.calc.correct import MEASURED, Corrected, EraRecords, correct
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.frames import Era
-from meterfix.model.device import OrificePlate, Tappings
+from meterfix.model.device import (
+    Calibration,
+    Device,
+    Nozzle,
+    NozzleForm,
+    OrificePlate,
+    Tappings,
+    VenturiForm,
+    VenturiTube,
+)
 from meterfix.model.gas import (
     BaseConditions,
     CalorificBasis,
@@ -52,7 +61,15 @@ AIR = GasTerms(
     isentropic_exponent=PropertyChoice(method="equation_of_state"),
     calorific_value=None,
 )
-PLATE = OrificePlate(0.0924, 0.154, Tappings.FLANGE, 16e-6, 11e-6, 293.15, 293.15)
+PLATE = OrificePlate(
+    bore=0.0924,
+    pipe_diameter=0.154,
+    tappings=Tappings.FLANGE,
+    bore_expansion=16e-6,
+    pipe_expansion=11e-6,
+    bore_reference_temperature=293.15,
+    pipe_reference_temperature=293.15,
+)
 METER = MeterTerms(
     device=PLATE,
     gas="gas",
@@ -156,15 +173,61 @@ def test_thermometer_passes_suffice(
     assert np.abs(more.mass_flow / result.mass_flow - 1.0).max() < 1e-9
 
 
+def test_downstream_thermometer_of_a_venturi_tube(library: GasLibrary) -> None:
+    """Behind a Venturi tube the gas has cooled by mu_JT times the stated part of dp.
+
+    ISO 5167-4:2003, 5.9, has a range for the loss and no equation; 5.5.3: C is 0.995.
+    """
+    device = device_of(3, 0.0924, 0.154)
+    assert isinstance(device, VenturiTube)
+    device = replace(device, form=VenturiForm.MACHINED, calibration=None)
+    given = readings(200, seed=3, era=replace(ERA, meter=replace(METER, device=device)))
+    result = correct([given], library)
+    p1, T1 = result.static_pressure_absolute, result.temperature_upstream
+    states = library.properties(NATURAL_GAS).line_state(p1, T1)
+    cooling = states.joule_thomson_coefficient * 0.12 * given.differential_pressure
+    assert pytest.approx(given.temperature + cooling, abs=1e-8) == T1
+    assert (cooling > 1e-4).all()
+    assert (result.discharge_coefficient == 0.995).all()
+
+
+def test_a_calibrated_device_in_a_record(library: GasLibrary) -> None:
+    """With a certificate C is the certificate's; beyond its range of Re_D the record says so."""
+    era = replace(ERA, meter=replace(METER, device=device_of(3, 0.03, 0.154)))
+    result = correct([readings(200, seed=4, era=era)], library)
+    assert (result.discharge_coefficient == 0.97).all()
+    outside = (result.flags & correction.FLAG_BITS["reynolds_number_outside_limits"]) != 0
+    assert (outside == (result.reynolds_number > 1e6)).all()
+    assert 0 < outside.sum() < 200
+    geometry = (result.flags & correction.FLAG_BITS["geometry_outside_limits"]) != 0
+    assert not geometry.any()
+
+
+def device_of(k: int, bore: float, pipe_diameter: float) -> Device:
+    """Return a device of the k-th form; some are calibrated."""
+    common = {
+        "bore": bore,
+        "pipe_diameter": pipe_diameter,
+        "bore_expansion": 16e-6,
+        "pipe_expansion": 11e-6,
+        "bore_reference_temperature": 293.15,
+        "pipe_reference_temperature": 293.15,
+        "calibration": Calibration(0.97, 0.002, "C-1", (1e4, 1e6)) if k % 11 == 3 else None,
+    }
+    if k % 2 == 0:
+        return OrificePlate(**common, tappings=list(Tappings)[k % 3])
+    if k % 4 == 1:
+        return Nozzle(**common, form=list(NozzleForm)[k % 3], pressure_loss_ratio=0.1)
+    return VenturiTube(**common, form=list(VenturiForm)[k % 3], pressure_loss_ratio=0.12)
+
+
 def many_meters(count: int) -> list[EraRecords]:
     """Meters of every kind, with zeros, gaps, reverse flow and absurd readings among them."""
     draw = np.random.default_rng(11)
     entries = []
     for k in range(count):
         D = draw.uniform(0.05, 0.6)
-        device = OrificePlate(
-            D * draw.uniform(0.2, 0.75), D, list(Tappings)[k % 3], 16e-6, 11e-6, 293.15, 293.15
-        )
+        device = device_of(k, D * draw.uniform(0.2, 0.75), D)
         terms = replace(
             METER,
             device=device,

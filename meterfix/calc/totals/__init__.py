@@ -42,8 +42,9 @@ it, divided by the flow time; NaN without flow. ``disputed_readings`` counts the
 readings of differential pressure, static pressure and temperature that a measured piece of the
 hour uses, each at its record or through an interpolation.
 
-*Flags set here.* ``disputed_reading`` and ``implausible_value``: any reading used at the record
-(the barometer's too) is so marked, either neighbour where it was interpolated.
+*Flags set here.* ``disputed_reading``, ``implausible_value`` and ``doubtful_quality``: any
+reading used at the record (the barometer's too) is so marked, either neighbour where it was
+interpolated.
 ``carried_value``: static pressure or temperature has no reading at the record's own instant.
 ``mean_of_differential_pressure``: the cells are means and not yet rooted.
 
@@ -52,6 +53,11 @@ are successive readings of one signal inside one hour. ``count_at_maximum`` coun
 above the transmitter's upper range value (1 for a rooted signal); where no range is known, those
 equal to the hour's maximum. The statistics of flowing records take each record once, with the
 constants in force at its instant.
+
+*Sensitivities.* A total is linear in its records' rates, so its derivative by a parameter is the
+same integral over the same pieces of the rate's derivative (`calc.sensitivity`). Parameters are
+named by whose they are: two transmitters, plates or gases of a day have columns of their own.
+What of it is per hour and not per record stands in `composition`. *Random variance*: `noise`.
 
 Nothing depends on what else is in the batch.
 """

@@ -21,6 +21,8 @@ class Carried:
     """Index of the later of two interpolated readings; else as `first`."""
     exact: Truths
     """The reading stands at the very instant."""
+    share: Floats
+    """Of the later of two interpolated readings in the value; 0 where one reading serves."""
 
 
 def without_excluded(series: Series) -> Series:
@@ -37,6 +39,7 @@ def without_excluded(series: Series) -> Series:
         values=series.values[kept],
         disputed=series.disputed[kept],
         implausible=series.implausible[kept],
+        doubtful=None if series.doubtful is None else series.doubtful[kept],
     )
 
 
@@ -58,7 +61,9 @@ def carried_to(instants: Instants, series: Series | None) -> Carried:
     count = len(instants)
     if series is None or len(series.instants) == 0:
         none = np.full(count, -1, dtype=np.int64)
-        return Carried(np.full(count, np.nan), none, none, np.zeros(count, dtype=np.bool_))
+        return Carried(
+            np.full(count, np.nan), none, none, np.zeros(count, dtype=np.bool_), np.zeros(count)
+        )
     carry = series.carry
     found = np.searchsorted(series.instants, instants, side="right") - 1
     earlier = np.maximum(found, 0)
@@ -67,6 +72,7 @@ def carried_to(instants: Instants, series: Series | None) -> Carried:
     exact = present & (age == 0)
     values = series.values[earlier]
     later = earlier
+    share = np.zeros(count)
     if carry.interval is not None:
         used = present & (age < carry.interval)
     elif carry.linear:
@@ -78,6 +84,7 @@ def carried_to(instants: Instants, series: Series | None) -> Carried:
         weight = age / np.maximum(distance, 1)
         line = values + (series.values[later] - values) * weight
         values = np.where(between, line, values)
+        share = np.where(between, weight, 0.0)
     else:
         used = present & (age <= carry.maximum_age)
     return Carried(
@@ -85,4 +92,5 @@ def carried_to(instants: Instants, series: Series | None) -> Carried:
         first=np.where(used, earlier, -1),
         second=np.where(used, later, -1),
         exact=exact,
+        share=share,
     )

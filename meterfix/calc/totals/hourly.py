@@ -2,18 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from meterfix.calc.correct import correct
+from meterfix.calc.correct import Corrected, correct
 from meterfix.calc.elementary import segment_sum
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.calc.totals.pieces import (
     MEASURED,
     REASON,
     Pieces,
+    Weights,
     contributions,
     cut,
     end_rates,
@@ -21,6 +22,7 @@ from meterfix.calc.totals.pieces import (
     settled,
     weights,
 )
+from meterfix.calc.totals.sensitive import Batch, SensitiveHours, sensitive_hours
 from meterfix.calc.totals.statistics import (
     Readings,
     flowing_statistics,
@@ -29,6 +31,7 @@ from meterfix.calc.totals.statistics import (
     signal_statistics,
 )
 from meterfix.calc.totals.stretches import FLAG_BIT, Parts, Stretch, cleaned, serving, stretches
+from meterfix.calc.totals.subjects import Disturbances, disturbance_of
 from meterfix.frames import (
     HOURLY_COLUMNS,
     HOURLY_INDEX,
@@ -49,6 +52,14 @@ enough for the arrays to stay near the processor."""
 
 
 @dataclass(frozen=True, slots=True)
+class _Asked:
+    """What sensitivities and random variances need to know, see `hourly_records`."""
+
+    components: Mapping[str, tuple[str, ...]]
+    repeatability: Mapping[str, float]
+
+
+@dataclass(frozen=True, slots=True)
 class _Rates:
     """The corrected records of a batch, as far as totals need them."""
 
@@ -63,7 +74,15 @@ class _Rates:
     missing: Integers
 
 
-def hourly_records(days: Sequence[MeterDay], gases: GasLibrary) -> list[HourlyRecord]:
+def hourly_records(
+    days: Sequence[MeterDay],
+    gases: GasLibrary,
+    *,
+    sensitive: bool = True,
+    components: Mapping[str, tuple[str, ...]] | None = None,
+    repeatability: Mapping[str, float] | None = None,
+    disturbances: Disturbances | None = None,
+) -> list[HourlyRecord]:
     """Return the hourly record of every meter-day, in the order given.
 
     Parameters
@@ -72,11 +91,23 @@ def hourly_records(days: Sequence[MeterDay], gases: GasLibrary) -> list[HourlyRe
         Any meters, any gas days; nothing in a result depends on what else is among them.
     gases : GasLibrary
         Source of gas properties.
+    sensitive : bool
+        False: no sensitivities and no random variance.
+    components : mapping, optional
+        By name of a gas: its components whose stated fractions are uncertain.
+    repeatability : mapping, optional
+        By name of a signal: one standard deviation of a reading [Pa or K]; others are
+        estimated from their successive differences.
+    disturbances : mapping, optional
+        By field of `Disturbance` and subject (see `frames.PARAMETERS`): what is changed. The
+        result then has no sensitivities: they are those of the undisturbed calculation.
 
     Returns
     -------
     list of HourlyRecord
         ``statistics`` is (hours, len(HOURLY_COLUMNS)): kg, m3, J, s, Pa, K; NaN: not known.
+        A sensitivity is NaN where the hour has a flow for which no uncertainty is stated (C,
+        expansibility and densities, in multiples of it), 0 where nothing flows.
 
     Raises
     ------
@@ -87,7 +118,14 @@ def hourly_records(days: Sequence[MeterDay], gases: GasLibrary) -> list[HourlyRe
         if day.end <= day.start:
             message = f"meter {day.meter}, gas day {day.gas_day}: its end must be after its start"
             raise ValueError(message)
-    return [record for batch in _batches(days) for record in _batch(batch, gases)]
+    asked = None
+    if sensitive and not disturbances:
+        asked = _Asked(components or {}, repeatability or {})
+    return [
+        record
+        for batch in _batches(days)
+        for record in _batch(batch, gases, asked, disturbances or {})
+    ]
 
 
 def _batches(days: Sequence[MeterDay]) -> Iterator[list[MeterDay]]:
@@ -104,7 +142,9 @@ def _batches(days: Sequence[MeterDay]) -> Iterator[list[MeterDay]]:
         yield batch
 
 
-def _batch(days: list[MeterDay], gases: GasLibrary) -> list[HourlyRecord]:
+def _batch(
+    days: list[MeterDay], gases: GasLibrary, asked: _Asked | None, disturbances: Disturbances
+) -> list[HourlyRecord]:
     """Return the hourly records of one batch."""
     hours = [-((day.start - day.end) // HOUR) for day in days]
     row_offsets = np.concatenate([[0], np.cumsum(hours)]).astype(np.int64)
@@ -113,25 +153,33 @@ def _batch(days: list[MeterDay], gases: GasLibrary) -> list[HourlyRecord]:
         {role: cleaned(getattr(day, role)) for role in (*SIGNAL_ROLES, "barometer")} for day in days
     ]
     parts: list[Stretch] = []
+    day_of_part: list[int] = []
     pieces_of: list[Pieces] = []
     rows_of: list[Integers] = []
     records = 0
-    for day, parts_of_day, row_offset in zip(days, signals, row_offsets[:-1].tolist(), strict=True):
+    for number, (day, parts_of_day) in enumerate(zip(days, signals, strict=True)):
+        row_offset = int(row_offsets[number])
         for stretch in stretches(day, parts_of_day):
             pieces_of.append(cut(stretch, day.start, row_offset, records))
             inside = (stretch.instants >= stretch.start) & (stretch.instants < stretch.end)
             row = (stretch.instants - day.start) // HOUR + row_offset
             rows_of.append(np.where(inside, row, -1))
             parts.append(stretch)
+            day_of_part.append(number)
             records += len(stretch.instants)
     pieces = joined(pieces_of)
-    rates = _rates(parts, np.concatenate(rows_of), gases)
+    rates, corrected = _rates(
+        days, parts, day_of_part, np.concatenate(rows_of), gases, disturbances
+    )
     table = np.full((count, len(HOURLY_COLUMNS)), np.nan)
 
     def put(name: str, values: Floats) -> None:
         table[:, HOURLY_INDEX[name]] = values + 0.0  # -0.0 + 0.0 is 0.0
 
-    _totals(put, pieces, rates, count, parts)
+    reason = settled(pieces, rates.missing)
+    measured = np.flatnonzero(reason == MEASURED)
+    ends_of = weights(pieces, measured, rates.instants)
+    _totals(put, pieces, rates, count, parts, reason, measured, ends_of)
     flowing = np.flatnonzero((rates.row >= 0) & (rates.rates["mass"] > 0.0))
     for name, values in flowing_statistics(
         rates.row[flowing],
@@ -146,6 +194,22 @@ def _batch(days: list[MeterDay], gases: GasLibrary) -> list[HourlyRecord]:
         for n, name in enumerate(SIGNAL_STATISTICS):
             put(f"{role}_{name}", statistics[:, n])
     unsolved = np.flatnonzero((rates.row >= 0) & (rates.missing == REASON["not_converged"]))
+    lengths = [len(of_part.start) for of_part in pieces_of]
+    part_of_piece = np.repeat(np.arange(len(parts)), lengths)
+    sensitive: list[SensitiveHours | None] = [None] * len(days)
+    if asked is not None:
+        batch = Batch(
+            days=days,
+            row_offsets=row_offsets,
+            parts=parts,
+            day_of_part=day_of_part,
+            corrected=corrected,
+            instants=rates.instants,
+            weights=ends_of,
+            row=pieces.row[measured],
+            stretch=part_of_piece[measured],
+        )
+        sensitive = [*sensitive_hours(batch, gases, asked.components, asked.repeatability)]
     return [
         HourlyRecord(
             meter=day.meter,
@@ -157,24 +221,46 @@ def _batch(days: list[MeterDay], gases: GasLibrary) -> list[HourlyRecord]:
                     unsolved[(rates.row[unsolved] >= low) & (rates.row[unsolved] < high)]
                 ].tolist()
             ),
+            parameters=() if beside is None else beside.parameters,
+            sensitivities=None if beside is None else beside.sensitivities,
+            random_variance=None if beside is None else beside.random_variance,
         )
-        for day, low, high in zip(
-            days, row_offsets[:-1].tolist(), row_offsets[1:].tolist(), strict=True
+        for day, low, high, beside in zip(
+            days, row_offsets[:-1].tolist(), row_offsets[1:].tolist(), sensitive, strict=True
         )
     ]
 
 
-def _rates(parts: list[Stretch], row: Integers, gases: GasLibrary) -> _Rates:
+def _rates(
+    days: list[MeterDay],
+    parts: list[Stretch],
+    day_of_part: list[int],
+    row: Integers,
+    gases: GasLibrary,
+    disturbances: Disturbances,
+) -> tuple[_Rates, Corrected | None]:
     """Return the corrected records of all stretches, one after the other."""
     records = [part.records for part in parts if part.records is not None]
     if not records:
         nothing = np.zeros(0)
         none = np.zeros(0, dtype=np.int64)
-        return _Rates(none, none, dict.fromkeys(TOTALS, nothing), nothing, nothing, none, none)
-    corrected = correct(records, gases)
+        no_rates = dict.fromkeys(TOTALS, nothing)
+        return _Rates(none, none, no_rates, nothing, nothing, none, none), None
+    if disturbances:
+        corrected = correct(
+            records,
+            gases,
+            [
+                disturbance_of(days[number].meter, part.records.era, disturbances)
+                for number, part in zip(day_of_part, parts, strict=True)
+                if part.records is not None
+            ],
+        )
+    else:
+        corrected = correct(records, gases)
     marks = np.concatenate([part.marks for part in parts])
     assert int(corrected.offsets[-1]) == len(marks) == len(row)
-    return _Rates(
+    rates = _Rates(
         instants=np.concatenate([part.instants for part in parts]),
         row=row,
         rates={
@@ -188,6 +274,7 @@ def _rates(parts: list[Stretch], row: Integers, gases: GasLibrary) -> _Rates:
         flags=corrected.flags.astype(np.int64) | marks,
         missing=corrected.missing.astype(np.int64),
     )
+    return rates, corrected
 
 
 def _totals(
@@ -196,9 +283,11 @@ def _totals(
     rates: _Rates,
     count: int,
     parts: list[Stretch],
+    reason: Integers,
+    measured: Integers,
+    ends_of: Weights,
 ) -> None:
     """Put times, totals, losses, the flags' shares and the disputed readings."""
-    reason = settled(pieces, rates.missing)
     length = pieces.end - pieces.start
     starts, ends = segments(pieces.row, count)
     put("duration", integer_sum(length, starts, ends) / SECOND)
@@ -206,12 +295,10 @@ def _totals(
         lost = np.where(reason == number, length, 0)
         put(f"lost_{name}", integer_sum(lost, starts, ends) / SECOND)
 
-    measured = np.flatnonzero(reason == MEASURED)
     rows = pieces.row[measured]
     starts, ends = segments(rows, count)
     time = integer_sum(length[measured], starts, ends)
     put("measured_time", time / SECOND)
-    ends_of = weights(pieces, measured, rates.instants)
     flow = np.zeros(len(measured), dtype=np.int64)
     for name in TOTALS:
         at_start, at_end = end_rates(ends_of, rates.rates[name])

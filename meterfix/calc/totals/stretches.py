@@ -49,6 +49,9 @@ class Stretch:
     """Bit mask per record of the flags that the readings themselves raise."""
     disputed: DisputedUses | None
     """None where no disputed reading is used."""
+    carried: tuple[tuple[str, Series, Carried], ...]
+    """By role, differential pressure itself included: a signal and which of its readings the
+    records use. Signals without a reading are left out."""
 
 
 def cleaned(parts: Parts) -> Parts:
@@ -111,7 +114,7 @@ def _stretch(day: MeterDay, start: int, end: int, signals: dict[str, Parts]) -> 
     dp = series["differential_pressure"]
     nothing = np.zeros(0, dtype=np.int64)
     if era is None or dp is None or len(dp.instants) == 0:
-        return Stretch(start, end, era, dp, nothing, None, nothing, None)
+        return Stretch(start, end, era, dp, nothing, None, nothing, None, ())
     # the last reading at or before the start, and the first at or after the end
     first = max(int(np.searchsorted(dp.instants, start, side="right")) - 1, 0)
     last = min(int(np.searchsorted(dp.instants, end, side="left")) + 1, len(dp.instants))
@@ -130,8 +133,14 @@ def _stretch(day: MeterDay, start: int, end: int, signals: dict[str, Parts]) -> 
     )
     marks = _marks(era, dp, first, last, [pressure, temperature])
     own = np.arange(first, last, dtype=np.int64)
-    itself = Carried(records.differential_pressure, own, own, np.ones(len(own), dtype=np.bool_))
-    sources = [(dp, itself)]
+    itself = Carried(
+        records.differential_pressure,
+        own,
+        own,
+        np.ones(len(own), dtype=np.bool_),
+        np.zeros(len(own)),
+    )
+    sources = [("differential_pressure", dp, itself)]
     uses = [(0, chosen["differential_pressure"], dp, itself)]
     for role, signal in (
         ("static_pressure", pressure),
@@ -141,15 +150,16 @@ def _stretch(day: MeterDay, start: int, end: int, signals: dict[str, Parts]) -> 
         readings = series[role]
         if readings is None or signal is None or len(readings.instants) == 0:
             continue
-        sources.append((readings, signal))
+        sources.append((role, readings, signal))
         if role in SIGNAL_ROLES:
             uses.append((SIGNAL_ROLES.index(role), chosen[role], readings, signal))
-    for readings, signal in sources:
+    for _, readings, signal in sources:
         for name, marked in (
             ("disputed_reading", readings.disputed),
             ("implausible_value", readings.implausible),
+            ("doubtful_quality", readings.doubtful),
         ):
-            if marked.any():
+            if marked is not None and marked.any():
                 hit = (signal.first >= 0) & (marked[signal.first] | marked[signal.second])
                 marks[hit] |= FLAG_BIT[name]
     disputed = [use for use in uses if use[2].disputed.any()]
@@ -162,6 +172,7 @@ def _stretch(day: MeterDay, start: int, end: int, signals: dict[str, Parts]) -> 
         records,
         marks,
         _disputed_uses(disputed) if disputed else None,
+        tuple(sources),
     )
 
 

@@ -84,7 +84,15 @@ def era(
     atmosphere=100_000.0,
 ):
     """Constants from `start` to `end`; the bore carries the factor of the plain rates."""
-    plate = OrificePlate(factor, 100.0, Tappings.CORNER, 0.0, 0.0, 293.15, 293.15)
+    plate = OrificePlate(
+        bore=factor,
+        pipe_diameter=100.0,
+        tappings=Tappings.CORNER,
+        bore_expansion=0.0,
+        pipe_expansion=0.0,
+        bore_reference_temperature=293.15,
+        pipe_reference_temperature=293.15,
+    )
     return Era(
         start=at(start),
         end=at(end),
@@ -195,7 +203,7 @@ def lab():
     hourly.correct = plain_correct
 
     def run(*days):
-        return hourly.hourly_records(days, None)
+        return hourly.hourly_records(days, None, sensitive=False)
 
     def column(record, name):
         return record.statistics[:, HOURLY_INDEX[name]]

@@ -40,7 +40,15 @@ GAS = GasTerms(
         38.9e6, CalorificBasis.VOLUME, CalorificKind.GROSS, 288.15, BASE
     ),
 )
-PLATE = OrificePlate(0.0924, 0.15408, Tappings.FLANGE, 16e-6, 11e-6, 293.15, 293.15)
+PLATE = OrificePlate(
+    bore=0.0924,
+    pipe_diameter=0.15408,
+    tappings=Tappings.FLANGE,
+    bore_expansion=16e-6,
+    pipe_expansion=11e-6,
+    bore_reference_temperature=293.15,
+    pipe_reference_temperature=293.15,
+)
 TERMS = MeterTerms(PLATE, "gas", "PDT", "PT", "TT", Tapping.UPSTREAM, Thermometer.DOWNSTREAM, 100.0)
 
 
