@@ -9,11 +9,11 @@ of the hour or gas day with it, and the reason names it.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date
 from enum import StrEnum
-from math import fsum, isnan
+from math import floor, fsum, isnan
 
 import numpy as np
 
@@ -21,14 +21,21 @@ from meterfix.calc.totals.periods import PeriodTotal, day_total
 from meterfix.frames import HOURLY_INDEX, Floats, HourlyRecord
 from meterfix.model.site import Envelope, Tolerance
 
-BALANCE_COLUMNS: tuple[str, ...] = ("in", "out", "vented", "imbalance", "measured_fraction")
-"""Columns of the hourly array; SI, NaN: not known."""
+BALANCE_COLUMNS: tuple[str, ...] = (
+    "in",
+    "out",
+    "vented",
+    "imbalance",
+    "measured_fraction",
+    "standard_uncertainty",
+)
+"""Columns of the hourly array; SI, NaN: not known; the uncertainty is the imbalance's."""
 
 QUANTITIES: tuple[str, ...] = ("mass", "base_volume", "energy")
 """kg, m3, J."""
 
 NO_STORAGE = "storage is not configured"
-NO_UNCERTAINTY = "no uncertainty yet"
+NO_UNCERTAINTY = "no source of uncertainty is stated"
 
 
 class Answer(StrEnum):
@@ -75,6 +82,8 @@ class DayBalance:
     storage_reason: str
     imbalance: float | None
     """None unless every input is complete."""
+    expanded_uncertainty: float | None
+    """Of the imbalance, k = 2; None where it is not known."""
     tolerance: float | None
     """In the quantity's unit; None if there is none or the input is not complete."""
     significant: Verdict
@@ -113,7 +122,8 @@ def _lack(meter: str, *, fraction: float | None, without: float, quantity: str) 
         return f"{meter} (no record)"
     parts = []
     if fraction < 1.0:
-        parts.append(f"{100.0 * fraction!r} % measured")
+        # cut to 0.0001 %, never rounded up to the whole
+        parts.append(f"{min(floor(1e6 * fraction + 1e-6), 999_999) / 1e4!r} % measured")
     if without > 0.0:
         name = quantity.replace("_", " ")
         parts.append(f"no {name} for {without!r} s of the measured time")
@@ -143,6 +153,9 @@ def day_balance(
     quantity: str,
     records: Mapping[str, HourlyRecord | None],
     tolerance: Tolerance | None,
+    expanded_uncertainty: float | None = None,
+    hourly_uncertainty: Floats | None = None,
+    unstated: Sequence[str] = (),
 ) -> DayBalance:
     """Return an envelope's balance over the hours of a gas day and over the gas day.
 
@@ -156,6 +169,12 @@ def day_balance(
         none.
     tolerance : Tolerance or None
         What is in force on the gas day; None: the contract states none.
+    expanded_uncertainty : float or None
+        Of the day's imbalance at k = 2; None: not known.
+    hourly_uncertainty : (hours,) array or None
+        Standard uncertainty of each hour's imbalance.
+    unstated : sequence of str
+        Sources of uncertainty for which nothing is stated: why there is no uncertainty.
 
     Returns
     -------
@@ -191,8 +210,11 @@ def day_balance(
     hourly = np.full((hours, len(BALANCE_COLUMNS)), np.nan)
     reasons = []
     for hour in range(hours):
-        hourly[hour], reason = _hour(groups, quantity, hour)
+        hourly[hour, :-1], reason = _hour(groups, quantity, hour)
         reasons.append(reason)
+    if hourly_uncertainty is not None:
+        complete = np.array([not reason for reason in reasons], dtype=np.bool_)
+        hourly[:, -1] = np.where(complete, hourly_uncertainty, np.nan)
 
     lack = _reason(
         [
@@ -225,8 +247,9 @@ def day_balance(
         storage_change=None,
         storage_reason=NO_STORAGE,
         imbalance=imbalance,
+        expanded_uncertainty=None if imbalance is None else expanded_uncertainty,
         tolerance=limit,
-        significant=Verdict(Answer.CANNOT_BE_JUDGED, NO_UNCERTAINTY),
+        significant=significance(imbalance, expanded_uncertainty, lack, unstated),
         beyond_tolerance=_beyond(imbalance, limit, lack),
         measured_fraction=min(
             (0.0 if entry.total is None else entry.total.measured_fraction for entry in inputs),
@@ -264,6 +287,29 @@ def _hour(groups: list[list[_Input]], quantity: str, hour: int) -> tuple[list[fl
     row = (inflow, outflow, vented, imbalance)
     known = [float("nan") if value is None else value for value in row]
     return [*known, min(fractions)], reason
+
+
+def significance(
+    imbalance: float | None, expanded: float | None, lack: str, unstated: Sequence[str] = ()
+) -> Verdict:
+    """Return whether an imbalance is beyond its own expanded uncertainty."""
+    if lack:
+        return Verdict(Answer.CANNOT_BE_JUDGED, lack)
+    if imbalance is None:
+        return Verdict(Answer.CANNOT_BE_JUDGED, "the envelope has no meter")
+    if expanded is None:
+        return Verdict(Answer.CANNOT_BE_JUDGED, why_no_uncertainty(unstated))
+    return Verdict(Answer.YES if abs(imbalance) > expanded else Answer.NO)
+
+
+def why_no_uncertainty(unstated: Sequence[str]) -> str:
+    """Return why a figure has no uncertainty: sources for which nothing is stated, or no source."""
+    if not unstated:
+        return NO_UNCERTAINTY
+    return (
+        f"no uncertainty is stated for {', '.join(unstated)} "
+        "(outside the limits of use or the stated range)"
+    )
 
 
 def _beyond(imbalance: float | None, limit: float | None, lack: str) -> Verdict:

@@ -11,7 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from math import fsum
 
-from meterfix.calc.balance.envelopes import NO_STORAGE, NO_UNCERTAINTY, Answer, Verdict
+from meterfix.calc.balance.envelopes import NO_STORAGE, Answer, Verdict, significance
 
 BASE_CHANGES = "the base conditions change within the period"
 
@@ -41,6 +41,7 @@ class MonthBalance:
     outflow: float | None
     vented: float | None
     imbalance: float | None
+    expanded_uncertainty: float | None
     tolerance: float | None
     beyond_tolerance: Verdict
     significant: Verdict
@@ -52,7 +53,11 @@ class MonthBalance:
 
 
 def month_balance(
-    days: Sequence[DayFigures], month_days: Sequence[str], duration: float
+    days: Sequence[DayFigures],
+    month_days: Sequence[str],
+    duration: float,
+    expanded_uncertainty: float | None = None,
+    unstated: Sequence[str] = (),
 ) -> MonthBalance:
     """Return an envelope's balance over a month.
 
@@ -64,6 +69,10 @@ def month_balance(
         Every gas day of the month, ISO dates in order.
     duration : float
         The month's length. [s]
+    expanded_uncertainty : float or None
+        Of the imbalance over the gas days that count, k = 2.
+    unstated : sequence of str
+        Sources of uncertainty for which nothing is stated: why there is no uncertainty.
 
     Returns
     -------
@@ -92,9 +101,10 @@ def month_balance(
         outflow=_sum([day.outflow for day in summed]),
         vented=_sum([day.vented for day in summed]),
         imbalance=imbalance,
+        expanded_uncertainty=None if imbalance is None else expanded_uncertainty,
         tolerance=tolerance,
         beyond_tolerance=_beyond(imbalance, tolerance, why_not, part),
-        significant=Verdict(Answer.CANNOT_BE_JUDGED, NO_UNCERTAINTY),
+        significant=_on(part, significance(imbalance, expanded_uncertainty, why_not, unstated)),
         storage_reason=NO_STORAGE,
         measured_fraction=fsum(day.duration for day in counted) / duration,
         reason="; ".join(reasons),
@@ -108,6 +118,13 @@ def _beyond(imbalance: float | None, tolerance: float | None, why_not: str, part
     if tolerance is None:
         return Verdict(Answer.CANNOT_BE_JUDGED, "no tolerance is stated")
     return Verdict(Answer.YES if abs(imbalance) > tolerance else Answer.NO, part)
+
+
+def _on(part: str, verdict: Verdict) -> Verdict:
+    """Return a verdict that says on what part of the month it rests."""
+    if verdict.answer is Answer.CANNOT_BE_JUDGED:
+        return verdict
+    return Verdict(verdict.answer, part)
 
 
 def _sum(values: Sequence[float | None]) -> float | None:

@@ -9,7 +9,12 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from meterfix.calc.balance.envelopes import BALANCE_COLUMNS, Answer, day_balance
+from meterfix.calc.balance.envelopes import (
+    BALANCE_COLUMNS,
+    Answer,
+    day_balance,
+    significance,
+)
 from meterfix.frames import HOURLY_COLUMNS, HOURLY_INDEX, HourlyRecord
 from meterfix.model.site import Envelope, Tolerance
 from meterfix.model.versions import always
@@ -83,7 +88,7 @@ def test_no_verdict_where_none_can_be_given():
     """Hours lack storage, significance lacks an uncertainty, no tolerance is no verdict."""
     balance = day_balance(WORKS, "mass", works(), None)
     assert str(balance.hourly_verdict) == "cannot be judged: storage is not configured"
-    assert str(balance.significant) == "cannot be judged: no uncertainty yet"
+    assert str(balance.significant) == "cannot be judged: no source of uncertainty is stated"
     assert str(balance.beyond_tolerance) == "cannot be judged: no tolerance is stated"
     assert balance.storage_change is None
     assert balance.storage_reason == "storage is not configured"
@@ -97,24 +102,21 @@ def test_missing_input_takes_the_imbalance_and_names_the_meter():
     assert balance.imbalance is None
     assert balance.outflow == 1990.0
     assert str(balance.beyond_tolerance) == (
-        f"cannot be judged: missing input: C ({100.0 * (7199.0 / 7200.0)!r} % measured)"
+        "cannot be judged: missing input: C (99.9861 % measured)"
     )
     assert column(balance, "imbalance")[0] == 15.0
     assert np.isnan(column(balance, "imbalance")[1])
     assert column(balance, "out").tolist() == [980.0, 1010.0]
-    percent = 100.0 * (3599.0 / 3600.0)
-    assert balance.hourly_reasons == ("", f"missing input: C ({percent!r} % measured)")
+    assert balance.hourly_reasons == ("", "missing input: C (99.9722 % measured)")
     assert balance.measured_fraction == 7199.0 / 7200.0
     assert column(balance, "measured_fraction").tolist() == [1.0, 3599.0 / 3600.0]
 
 
 def test_a_microsecond_is_not_rounded_to_all():
-    """A meter that misses a microsecond says so: the reason carries every digit."""
+    """A meter that misses a microsecond says so: the reason cuts, and never rounds up."""
     records = works(A=record([600.0, 500.0], measured=[3600.0, 3599.999999]))
     balance = day_balance(WORKS, "mass", records, TOLERANCE)
-    percent = 100.0 * (7199.999999 / 7200.0)
-    assert balance.reason == f"missing input: A ({percent!r} % measured)"
-    assert percent < 100.0
+    assert balance.reason == "missing input: A (99.9999 % measured)"
     assert balance.imbalance is None
 
 
@@ -150,8 +152,7 @@ def test_energy_of_a_part_of_the_day_is_no_input():
     assert (balance.inflow, balance.imbalance, balance.tolerance) == (None, None, None)
     assert balance.outflow == 80e6
     lack = "no energy for 3600.0 s of the measured time"
-    percent = 100.0 * (7199.0 / 7200.0)
-    assert balance.reason == f"missing input: A ({percent!r} % measured, {lack})"
+    assert balance.reason == f"missing input: A (99.9861 % measured, {lack})"
     assert balance.hourly_reasons[0] == f"missing input: A ({lack})"
     assert np.isnan(column(balance, "in")[0])
     assert column(balance, "in")[1] == 80e6
@@ -216,3 +217,15 @@ def test_the_balance_closes(a, b, c, v):
     )
     assert swapped.imbalance == balance.imbalance
     assert swapped.hourly.tobytes() == balance.hourly.tobytes()
+
+
+def test_significance_compares_the_imbalance_with_its_own_expanded_uncertainty():
+    """An imbalance of 5 is significant beside 4.9 and not beside 5.1; unknown beside None."""
+    assert str(significance(5.0, 4.9, "")) == "yes"
+    assert str(significance(-5.0, 4.9, "")) == "yes"
+    assert str(significance(5.0, 5.1, "")) == "no"
+    assert str(significance(5.0, None, "")).startswith("cannot be judged: no source")
+    unstated = str(significance(5.0, None, "", ("A C", "B C")))
+    assert unstated.startswith("cannot be judged: no uncertainty is stated for A C, B C (outside")
+    assert str(significance(5.0, 4.9, "A (no record)")) == "cannot be judged: A (no record)"
+    assert str(significance(None, 4.9, "")).startswith("cannot be judged")

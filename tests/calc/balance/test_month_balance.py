@@ -72,6 +72,10 @@ def test_a_verdict_on_a_part_of_the_month_says_so():
     assert str(whole.beyond_tolerance) == "no"
     beyond = month_balance([day(n, outflow=90.0) for n in range(1, 30)], MONTH, DURATION)
     assert str(beyond.beyond_tolerance) == "yes: on 29 of 30 gas days"
+    doubtful = month_balance([day(1)], MONTH, DURATION, None, ("A C",))
+    assert str(doubtful.significant).startswith(
+        "cannot be judged: no uncertainty is stated for A C"
+    )
     unstated = month_balance([day(1, tolerance=None)], MONTH, DURATION)
     assert str(unstated.beyond_tolerance) == "cannot be judged: no tolerance is stated"
 
