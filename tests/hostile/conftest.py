@@ -1,5 +1,6 @@
 """Layouts and the two ways of reading, for every test of bad input."""
 
+import re
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -7,7 +8,17 @@ import pytest
 
 from meterfix.frames import ParsedFile
 from meterfix.intake.logs import parse, parse_careful, parse_fast, parse_many
-from meterfix.model.source import Column, Holds, Layout, Quantity, RepeatedHour, Stamp
+from meterfix.model.source import (
+    Column,
+    Holds,
+    Layout,
+    LayoutKind,
+    Quality,
+    Quantity,
+    RepeatedHour,
+    Stamp,
+    Use,
+)
 
 ARRIVAL = 1_794_700_800_000_000
 """2026-11-15T00:00:00Z [us]."""
@@ -68,6 +79,27 @@ LAYOUT = Layout(
 )
 """Times from 2000 on."""
 
+TAG_LAYOUT = replace(
+    LAYOUT,
+    kind=LayoutKind.TAGS,
+    columns=tuple(
+        replace(column, header=tag, required=False)
+        for tag, column in zip(("PDT-1.PV", "NA", "007"), LAYOUT.columns, strict=True)
+    ),
+    tag_column="tag",
+    value_column="value",
+    quality_column="quality",
+    qualities=(
+        Quality("GOOD", Use.GOOD, ""),
+        Quality("192", Use.GOOD, ""),
+        Quality("UNC", Use.DOUBTFUL, "uncertain, last usable value"),
+        Quality("BAD", Use.BAD, "not connected"),
+        Quality("0", Use.BAD, "no communication"),
+    ),
+    ignored_tags=("SP-1", "@note"),
+)
+"""The same three quantities, a row per tag and time; two tags bear odd names."""
+
 
 @dataclass(frozen=True)
 class Case:
@@ -107,6 +139,7 @@ def plain(parsed: ParsedFile) -> dict[str, object]:
     }
     out["problems"] = [(p.line, p.cell, p.reason, p.text) for p in parsed.problems]
     for cells in parsed.cells:
+        out[f"doubtful {cells.column}"] = cells.doubtful.tolist()
         out[f"column {cells.column}"] = (
             cells.instants.tolist(),
             cells.values.tobytes(),
@@ -123,7 +156,8 @@ def check_counts(parsed: ParsedFile, first_line: int = 1) -> None:
     candidates: set[int] = set()
     for cells in parsed.cells:
         assert len(cells.instants) == len(cells.values) == len(cells.lines)
-        assert len(cells.implausible) == len(cells.lines)
+        assert len(cells.implausible) == len(cells.doubtful) == len(cells.lines)
+        assert cells.doubtful.dtype == np.bool_
         assert cells.instants.dtype == np.int64
         assert cells.lines.dtype == np.int64
         assert cells.values.dtype == np.float64
@@ -133,7 +167,10 @@ def check_counts(parsed: ParsedFile, first_line: int = 1) -> None:
     assert parsed.lines_read == len(candidates) + parsed.lines_set_aside + parsed.lines_skipped
     assert all(first_line <= line < first_line + parsed.lines_read for line in candidates)
     told = {p.line for p in parsed.problems if "neither declared nor ignored" not in p.reason}
-    assert len(told - candidates) == parsed.lines_set_aside
+    # an unknown tag is told once, with the number of its lines
+    counts = (re.search(r"(\d+) lines? from this one on", p.reason) for p in parsed.problems)
+    more = sum(int(count[1]) - 1 for count in counts if count)
+    assert len(told - candidates) + more == parsed.lines_set_aside
     assert all(p.reason and len(p.text) <= 1000 for p in parsed.problems)
 
 
@@ -164,10 +201,24 @@ def read_both_ways(
 
 @pytest.fixture(scope="session")
 def layout():
-    """Return a function that gives the plain layout with some of its fields changed."""
+    """Return a function that gives a plain layout with some of its fields changed.
+
+    With `kind=LayoutKind.TAGS` it is the layout of tag logs.
+    """
 
     def changed(**fields) -> Layout:
-        return replace(LAYOUT, **fields)
+        tags = fields.get("kind") is LayoutKind.TAGS
+        return replace(TAG_LAYOUT if tags else LAYOUT, **fields)
+
+    return changed
+
+
+@pytest.fixture(scope="session")
+def tag_layout():
+    """Return a function that gives the layout of tag logs with some of its fields changed."""
+
+    def changed(**fields) -> Layout:
+        return replace(TAG_LAYOUT, **fields)
 
     return changed
 
@@ -192,10 +243,10 @@ def arrival() -> int:
 
 @pytest.fixture(scope="session")
 def check_fate():
-    """Return the check that a case has exactly its fate."""
+    """Return the check that a case has exactly its fate in a layout."""
 
-    def check(case: Case) -> None:
-        parsed, accepted = read_both_ways(case.content, replace(LAYOUT, **case.layout))
+    def check(case: Case, base: Layout = LAYOUT) -> None:
+        parsed, accepted = read_both_ways(case.content, replace(base, **case.layout))
         assert case.rejected in parsed.rejected
         assert bool(parsed.rejected) == bool(case.rejected)
         if case.fast is not None:
@@ -220,8 +271,8 @@ def check_fate():
 def check_lasting():
     """Return the check that a case keeps its fate when 200 good lines follow it."""
 
-    def check(case: Case) -> None:
-        declared = replace(LAYOUT, **case.layout)
+    def check(case: Case, base: Layout = LAYOUT) -> None:
+        declared = replace(base, **case.layout)
         alone, _ = read_both_ways(case.content, declared)
         time = "2026-09-{:02}T{:02}:00:00Z"
         if declared.time_format.startswith("%Y-%m-%d %H"):
@@ -229,16 +280,26 @@ def check_lasting():
         rows = []
         for n in range(200):
             value = f"{n}{declared.decimal_mark}25"
-            cells = [time.format(1 + n // 24, n % 24), *([value] * (len(alone.header) - 1))]
+            by_header = {"tag": declared.columns[n % 2].header, "quality": "GOOD"}
+            by_header[declared.time_columns[0]] = time.format(1 + n // 24, n % 24)
+            cells = [by_header.get(name, value) for name in alone.header]
             rows.append(declared.delimiter.join(cells))
         parsed, _ = read_both_ways(case.content + "\n".join(rows).encode() + b"\n", declared)
         assert parsed.lines_read == alone.lines_read + 200
         assert plain(parsed)["problems"] == plain(alone)["problems"]
         assert parsed.cells_set_aside == alone.cells_set_aside
-        for cells, first in zip(parsed.cells, alone.cells, strict=True):
-            count = len(first.lines)
-            assert cells.values[:count].tolist() == first.values.tolist()
-            assert cells.instants[:count].tolist() == first.instants.tolist()
-            assert len(cells.lines) == count + 200
+        before = {cells.column: cells for cells in alone.cells}
+        rows_of = {cells.column: 200 for cells in parsed.cells}
+        if declared.kind is LayoutKind.TAGS:
+            names = [column.header for column in declared.columns]
+            rows_of = {names[0]: 100, names[1]: 100, names[2]: 0}
+        assert set(before) <= {cells.column for cells in parsed.cells}
+        for cells in parsed.cells:
+            count = len(before[cells.column].lines) if cells.column in before else 0
+            if count:
+                first = before[cells.column]
+                assert cells.values[:count].tolist() == first.values.tolist()
+                assert cells.instants[:count].tolist() == first.instants.tolist()
+            assert len(cells.lines) == count + rows_of[cells.column]
 
     return check

@@ -350,14 +350,12 @@ CASES = [
 
 NOT_CONTENT = {
     1: "a growing file: discovery",
-    27: "an unknown tag: this layout has columns; a column that no signal uses is the run's",
     30: "a file over the size limit: discovery and opening",
     31: "a gzip bomb: opening",
     32: "truncated gzip: opening",
     33: "a symbolic link: discovery",
     34: "a pipe or device: discovery",
     35: "odd file names: discovery",
-    36: "a tag that looks like a formula: this layout has no tags",
     37: "known bytes under another name: the ledger",
     38: "other bytes under a known name: the ledger",
     39: "files that disagree: the ledger",

@@ -1,11 +1,15 @@
-"""Logs with a row per time and a column per quantity: files found, read and parsed."""
+"""Logs: files found, read and parsed.
 
+Two layouts: a row per time with a column per quantity, and a row per tag and time.
+"""
+
+from meterfix.intake.logs.both_paths import parse, parse_many
+from meterfix.intake.logs.careful import parse_careful
 from meterfix.intake.logs.content import open_content
 from meterfix.intake.logs.discover import Found, Looked, NotRead, look, read_stable
 from meterfix.intake.logs.fast import parse_fast
 from meterfix.intake.logs.tail import Tail, tail_of
 from meterfix.intake.logs.text import Refusal, ends_with_line_end
-from meterfix.intake.logs.wide import parse, parse_careful, parse_many
 
 __all__ = [
     "Found",

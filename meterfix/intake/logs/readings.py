@@ -11,13 +11,16 @@ import numpy as np
 from meterfix.frames import Cells, Floats, Instants, Integers, ParsedFile, Problem, Truths
 from meterfix.intake.logs.grammar import MINUTE
 from meterfix.intake.logs.rows import rules_of
-from meterfix.intake.logs.text import kept
+from meterfix.intake.logs.text import kept, shown
 from meterfix.intake.logs.zone import ALWAYS_UTC, to_instants
-from meterfix.model.calendar import DAY, from_microseconds
-from meterfix.model.source import Layout, RepeatedHour, Stamp
+from meterfix.model.calendar import DAY
+from meterfix.model.source import Layout, LayoutKind, RepeatedHour, Stamp
+from meterfix.model.wording import counted, utc_text
 
 FUTURE_ALLOWANCE = 5 * MINUTE
 """How far a time may lie after the file's arrival: clocks differ a little."""
+FORMULA_MARKS = frozenset("=+-@")
+"""What a spreadsheet takes for the beginning of a formula."""
 _FIRST_WALL = -70 * 366 * DAY
 """No zone's clock is looked up before about 1900."""
 
@@ -35,7 +38,12 @@ class Rows:
     declared: Integers
     """How many declared columns the row's header has."""
     values: tuple[Floats, ...]
-    """One array per column of the layout; NaN where a cell cannot be used."""
+    """One array per column of the layout, in a tag log one in all; NaN where a cell cannot be
+    used."""
+    tags: Integers
+    """Index of each row's tag in the layout's columns; 0 in a wide log."""
+    doubtful: Truths
+    """By the row's quality code."""
     time_text: Callable[[int], str]
     """A row's time as written, by its index."""
 
@@ -56,6 +64,8 @@ class FileRows:
     warning: str = ""
     problems: list[Problem] = field(default_factory=list)
     """In the order of lines; within a line in the order of cells."""
+    unknown_tags: dict[str, tuple[int, int]] = field(default_factory=dict)
+    """Tags that the layout does not declare: their first line, and how many they have."""
     later_hour: bool = False
     last_local: int | None = None
 
@@ -96,10 +106,7 @@ def finish(
     if stamp is Stamp.INTERVAL_END and interval is not None:
         instants = instants - interval
     usable = [~np.isnan(values) & timed for values in rows.values]
-    implausible = [
-        (values < column.plausible_minimum) | (values > column.plausible_maximum)
-        for values, column in zip(rows.values, layout.columns, strict=True)
-    ]
+    implausible = _implausible(rows, layout)
     count = np.zeros(len(rows.walls), dtype=np.int64)
     for good in usable:
         count += good
@@ -107,18 +114,26 @@ def finish(
     finished: list[ParsedFile] = []
     for file in files:
         part = slice(file.start, file.stop)
-        cells = []
-        for index in file.columns:
-            chosen = part if full[index] else file.start + np.flatnonzero(usable[index][part])
-            cells.append(
-                Cells(
-                    column=layout.columns[index].header,
-                    instants=instants[chosen],
-                    values=rows.values[index][chosen],
-                    lines=rows.lines[chosen],
-                    implausible=implausible[index][chosen],
-                )
+        chosen: list[tuple[int, int, slice | Integers]] = []
+        if layout.kind is LayoutKind.TAGS:
+            tagged = file.start + np.flatnonzero(usable[0][part])
+            chosen.extend((tag, 0, at) for tag, at in _by_tag(rows.tags, tagged))
+        else:
+            for index in file.columns:
+                at = part if full[index] else file.start + np.flatnonzero(usable[index][part])
+                chosen.append((index, index, at))
+        cells = [
+            Cells(
+                column=layout.columns[column].header,
+                instants=instants[at],
+                values=rows.values[index][at],
+                lines=rows.lines[at],
+                implausible=implausible[index][at],
+                doubtful=rows.doubtful[at],
             )
+            for column, index, at in chosen
+        ]
+        unknown = _tell_unknown(file)
         used = count[part]
         finished.append(
             ParsedFile(
@@ -127,8 +142,8 @@ def finish(
                 header=file.header,
                 lines_read=file.lines_read,
                 lines_skipped=file.lines_skipped,
-                lines_set_aside=file.lines_malformed + int(np.count_nonzero(used == 0)),
-                cells_set_aside=int(rows.declared[part].sum() - used.sum()),
+                lines_set_aside=file.lines_malformed + unknown + int(np.count_nonzero(used == 0)),
+                cells_set_aside=unknown + int(rows.declared[part].sum() - used.sum()),
                 cells=tuple(cells),
                 problems=tuple(file.problems),
                 end_instant_is_later=file.later_hour,
@@ -136,6 +151,54 @@ def finish(
             )
         )
     return finished
+
+
+def _implausible(rows: Rows, layout: Layout) -> list[Truths]:
+    """Return, per array of values, which lie outside their column's plausible range."""
+    lows = np.array([column.plausible_minimum for column in layout.columns])
+    highs = np.array([column.plausible_maximum for column in layout.columns])
+    if layout.kind is LayoutKind.TAGS:
+        values = rows.values[0]
+        return [(values < lows[rows.tags]) | (values > highs[rows.tags])]
+    return [
+        (values < low) | (values > high)
+        for values, low, high in zip(rows.values, lows, highs, strict=True)
+    ]
+
+
+def _by_tag(tags: Integers, at: Integers) -> list[tuple[int, Integers]]:
+    """Return each tag among the rows, in the layout's order, with its rows in file order."""
+    if len(at) == 0:
+        return []
+    at = at[np.argsort(tags[at], kind="stable")]
+    edges = np.flatnonzero(np.diff(tags[at])) + 1
+    return [(int(tags[part[0]]), part) for part in np.split(at, edges)]
+
+
+def _tell_unknown(file: FileRows) -> int:
+    """Add a problem for each unknown tag, and a warning; return how many lines they have."""
+    if not file.unknown_tags:
+        return 0
+    told = list(file.problems)
+    for name, (line, count) in file.unknown_tags.items():
+        formula = "; it begins like a formula" if name[:1] in FORMULA_MARKS and name else ""
+        told.append(
+            Problem(
+                line,
+                name,
+                f"tag {shown(name)} is not declared for this source{formula}; "
+                f"{counted(count, 'line from this one on is', 'lines from this one on are')} kept "
+                "and judged again once it is",
+                kept(name),
+            )
+        )
+    file.problems = sorted(told, key=lambda problem: problem.line)
+    names = list(file.unknown_tags)
+    listed = ", ".join(shown(name) for name in names[:10])
+    more = f" and {len(names) - 10} more" if len(names) > 10 else ""
+    told_names = f"unknown tags not read: {listed}{more}"
+    file.warning = f"{file.warning}; {told_names}" if file.warning else told_names
+    return sum(count for _, count in file.unknown_tags.values())
 
 
 def _place(
@@ -239,7 +302,7 @@ def _why(code: int, text: str, layout: Layout, arrival: int) -> str:
             "nor a declared order settles which is meant"
         )
     if code == _EARLY:
-        bound = from_microseconds(layout.earliest).isoformat()
+        bound = utc_text(layout.earliest)
         return f"{given} lies before {bound}, the earliest that this source may hold"
-    bound = from_microseconds(arrival).isoformat()
+    bound = utc_text(arrival)
     return f"{given} lies more than 5 minutes after the file's arrival at {bound}"

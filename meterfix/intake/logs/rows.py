@@ -12,7 +12,8 @@ from meterfix.frames import Problem
 from meterfix.intake.logs.grammar import TimeGrammar, number_pattern, time_grammar
 from meterfix.intake.logs.heading import Heading
 from meterfix.intake.logs.text import Malformed, kept, shown
-from meterfix.model.source import Column, Layout
+from meterfix.model.source import Column, Layout, LayoutKind, Quality, Use
+from meterfix.model.wording import counted
 
 
 @dataclass(frozen=True)
@@ -25,6 +26,13 @@ class Rules:
     bad: dict[str, str]
     time_name: str
     """Under which a bad time is reported."""
+    kind_name: str
+    """What messages call that which a cell belongs to: column or tag."""
+    places: dict[str, int]
+    """Index in layout.columns by header or tag."""
+    ignored_tags: frozenset[str]
+    qualities: dict[str, Quality]
+    """By code."""
 
 
 @lru_cache(maxsize=256)
@@ -43,7 +51,15 @@ def rules_of(layout: Layout) -> Rules:
         time=time_grammar(layout.time_format, hour_24=layout.hour_24),
         bad=dict(layout.bad_values),
         time_name=" ".join(layout.time_columns),
+        kind_name="column" if layout.kind is LayoutKind.WIDE else "tag",
+        places={column.header: n for n, column in enumerate(layout.columns)},
+        ignored_tags=frozenset(layout.ignored_tags),
+        qualities={quality.code: quality for quality in layout.qualities},
     )
+
+
+UNKNOWN_TAG, IGNORED_TAG = -1, -2
+"""In place of a tag's index: tags that are not declared, and those declared to be left out."""
 
 
 @dataclass(slots=True)
@@ -56,6 +72,10 @@ class Row:
     values: list[float]
     """One per heading.columns."""
     problems: list[Problem]
+    tag: int = 0
+    """Index of the tag in layout.columns, or UNKNOWN_TAG or IGNORED_TAG; 0 in a wide log."""
+    tag_name: str = ""
+    doubtful: bool = False
 
 
 def read_row(cells: Sequence[str], line: int, heading: Heading, rules: Rules) -> Row | Malformed:
@@ -72,14 +92,15 @@ def read_row(cells: Sequence[str], line: int, heading: Heading, rules: Rules) ->
     rules : Rules
         The source's layout.
     """
-    width = len(heading.names)
-    if len(cells) < width or any(cells[width:]):
-        return Malformed(f"the line has {len(cells)} cells; its header has {width} columns")
+    malformed = cells_of_width(cells, heading)
+    if malformed is not None:
+        return malformed
     time_text = " ".join(cells[position] for position in heading.times)
     wall = rules.time.read(time_text)
+    if heading.tag >= 0:
+        return _tag_row(cells, line, heading, rules, time_text, wall)
     if isinstance(wall, str):
-        problem = Problem(line, rules.time_name, wall, kept(time_text))
-        return Row(None, time_text, [math.nan] * len(heading.columns), [problem])
+        return _without_time(line, heading, rules, time_text, wall)
     values: list[float] = []
     problems: list[Problem] = []
     for position, index in heading.columns:
@@ -93,21 +114,71 @@ def read_row(cells: Sequence[str], line: int, heading: Heading, rules: Rules) ->
     return Row(wall, time_text, values, problems)
 
 
+def _tag_row(
+    cells: Sequence[str], line: int, heading: Heading, rules: Rules, time_text: str, wall: int | str
+) -> Row:
+    """Return what a line of a tag log holds: one cell, its tag's."""
+    name = cells[heading.tag]
+    tag = tag_index(name, rules)
+    if tag < 0:
+        return Row(None if isinstance(wall, str) else wall, time_text, [math.nan], [], tag, name)
+    if isinstance(wall, str):
+        row = _without_time(line, heading, rules, time_text, wall)
+        row.tag, row.tag_name = tag, name
+        return row
+    text = cells[heading.columns[0][0]]
+    use = Use.GOOD
+    found: float | str
+    if heading.quality >= 0:
+        use, found = read_quality(cells[heading.quality], name, rules)
+    if use is not Use.BAD:
+        found = read_value(text, rules.layout.columns[tag], rules)
+    if isinstance(found, str):
+        return Row(wall, time_text, [math.nan], [Problem(line, name, found, kept(text))], tag, name)
+    return Row(wall, time_text, [found], [], tag, name, use is Use.DOUBTFUL)
+
+
+def _without_time(line: int, heading: Heading, rules: Rules, time_text: str, why: str) -> Row:
+    problem = Problem(line, rules.time_name, why, kept(time_text))
+    return Row(None, time_text, [math.nan] * len(heading.columns), [problem])
+
+
+def tag_index(name: str, rules: Rules) -> int:
+    """Return a tag's index in layout.columns, or UNKNOWN_TAG or IGNORED_TAG."""
+    return IGNORED_TAG if name in rules.ignored_tags else rules.places.get(name, UNKNOWN_TAG)
+
+
+def read_quality(code: str, tag: str, rules: Rules) -> tuple[Use, str]:
+    """Return what becomes of a value with this quality code, and why if it is set aside."""
+    quality = rules.qualities.get(code)
+    if quality is None:
+        known = ", ".join(shown(known) for known in list(rules.qualities)[:12])
+        return Use.BAD, (
+            f"tag {shown(tag)}: quality {shown(code)} is not declared for this source ({known})"
+        )
+    return quality.use, (
+        f"tag {shown(tag)}: quality {shown(code)} stands for: {quality.meaning}"
+        if quality.use is Use.BAD
+        else ""
+    )
+
+
 def read_value(text: str, column: Column, rules: Rules) -> float | str:
     """Return a cell's value in SI, or a sentence that says why it holds none."""
+    name = f"{rules.kind_name} {shown(column.header)}"
     if not text:
-        return f"column {shown(column.header)}: no value"
+        return f"{name}: no value"
     meaning = rules.bad.get(text)
     if meaning is not None:
-        return f"column {shown(column.header)}: {shown(text)} stands for: {meaning}"
+        return f"{name}: {shown(text)} stands for: {meaning}"
     if rules.number.fullmatch(text) is None:
         marks = f"decimal mark {rules.layout.decimal_mark!r}"
         if rules.layout.thousands_mark:
             marks += f", thousands mark {rules.layout.thousands_mark!r}"
-        return f"column {shown(column.header)}: {shown(text)} is not a number ({marks})"
+        return f"{name}: {shown(text)} is not a number ({marks})"
     value = read_number(text, rules) * column.scale + column.offset
     if not math.isfinite(value):
-        return f"column {shown(column.header)}: {shown(text)} is too large for a number"
+        return f"{name}: {shown(text)} is too large for a number"
     return value
 
 
@@ -118,6 +189,20 @@ def read_number(text: str, rules: Rules) -> float:
     return float(text.replace(rules.layout.decimal_mark, "."))
 
 
+def value_arrays(layout: Layout) -> int:
+    """Return how many arrays of values its rows have: one per column, in a tag log one in all."""
+    return len(layout.columns) if layout.kind is LayoutKind.WIDE else 1
+
+
 def not_a_row(found: Row | Malformed) -> bool:
     """Return whether a line has no cells or no time, so that it may be a header."""
     return isinstance(found, Malformed) or found.wall is None
+
+
+def cells_of_width(cells: Sequence[str], heading: Heading) -> Malformed | None:
+    """Return why a line's cells are not the header's, None if they are."""
+    width = len(heading.names)
+    if len(cells) < width or any(cells[width:]):
+        given, wanted = counted(len(cells), "cell"), counted(width, "column")
+        return Malformed(f"the line has {given}; its header has {wanted}")
+    return None

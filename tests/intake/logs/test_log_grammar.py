@@ -9,9 +9,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from meterfix.intake.logs.fast import read_numbers
 from meterfix.intake.logs.fixed_time import fixed_times
 from meterfix.intake.logs.grammar import format_parts, number_pattern, time_grammar
+from meterfix.intake.logs.joined import read_numbers
 from meterfix.model.calendar import to_microseconds
 
 

@@ -1,19 +1,14 @@
-"""Logs with a row per time and a column per quantity: the careful path, line by line.
-
-`parse` and `parse_many` take the fast path where its strict conditions hold; both paths give
-equal cells, fates and line numbers.
-"""
+"""The careful path: a log file line by line."""
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
 
 from meterfix.frames import ParsedFile, Problem
-from meterfix.intake.logs.fast import Prepared, parse_batch, parse_fast, prepare
 from meterfix.intake.logs.heading import (
     Heading,
     Unfit,
@@ -24,7 +19,16 @@ from meterfix.intake.logs.heading import (
     unknown_column,
 )
 from meterfix.intake.logs.readings import FileRows, Rows, finish
-from meterfix.intake.logs.rows import Rules, not_a_row, read_row, rules_of
+from meterfix.intake.logs.rows import (
+    IGNORED_TAG,
+    UNKNOWN_TAG,
+    Row,
+    Rules,
+    not_a_row,
+    read_row,
+    rules_of,
+    value_arrays,
+)
 from meterfix.intake.logs.text import (
     LINE_LIMIT,
     Malformed,
@@ -37,129 +41,6 @@ from meterfix.intake.logs.text import (
     to_utf8,
 )
 from meterfix.model.source import Layout, Stamp
-
-FAST_FROM = 4096
-"""A smaller file is read line by line: setting up the fast path would cost more."""
-BATCH_BYTES = 32 * 1024 * 1024
-"""Small files are joined up to about this size."""
-
-
-def parse(
-    content: bytes,
-    layout: Layout,
-    *,
-    stamp: Stamp,
-    interval: int | None,
-    arrival: int,
-    header: tuple[str, ...] | None = None,
-    first_line: int = 1,
-    later_hour: bool = False,
-    last_local: int | None = None,
-) -> ParsedFile:
-    """Return what a log file's bytes hold, by the fast path where it can.
-
-    Parameters
-    ----------
-    content : bytes
-        The file, decompressed; or the tail of an appended one.
-    layout : Layout
-        As declared for its source.
-    stamp, interval : Stamp, int or None
-        What a row's time is; the length of its interval [us].
-    arrival : int
-        When the file arrived [UTC us]; times more than 5 minutes later are set aside.
-    header : tuple of str, optional
-        For a tail: the header in force before it (`ParsedFile.header`); it then holds none.
-    first_line : int
-        Number of the content's first line in its file.
-    later_hour, last_local : bool, int or None
-        For a tail: `end_instant_is_later` and `end_local` of what came before it.
-
-    Raises
-    ------
-    ValueError
-        If the layout cannot be used at all (its time format or encoding).
-    """
-    if len(content) >= FAST_FROM:
-        quick = parse_fast(
-            content,
-            layout,
-            stamp=stamp,
-            interval=interval,
-            arrival=arrival,
-            header=header,
-            first_line=first_line,
-            later_hour=later_hour,
-            last_local=last_local,
-        )
-        if quick is not None:
-            return quick
-    return parse_careful(
-        content,
-        layout,
-        stamp=stamp,
-        interval=interval,
-        arrival=arrival,
-        header=header,
-        first_line=first_line,
-        later_hour=later_hour,
-        last_local=last_local,
-    )
-
-
-def parse_many(
-    contents: Sequence[bytes],
-    layout: Layout,
-    *,
-    stamp: Stamp,
-    interval: int | None,
-    arrivals: Sequence[int],
-) -> list[ParsedFile]:
-    """Return what each of many whole files holds; the same as `parse` of each.
-
-    Files with identical header bytes that fulfil the fast path's conditions are read as one.
-
-    Parameters
-    ----------
-    contents : sequence of bytes
-        The files, decompressed.
-    arrivals : sequence of int
-        When each arrived [UTC us].
-    layout, stamp, interval
-        As for `parse`.
-    """
-    found: dict[int, ParsedFile] = {}
-    for numbers, batch in _batches(contents, layout):
-        results = parse_batch(
-            batch, layout, stamp=stamp, interval=interval, arrivals=[arrivals[n] for n in numbers]
-        )
-        if results is not None:
-            found.update(zip(numbers, results, strict=True))
-    for number, (content, arrival) in enumerate(zip(contents, arrivals, strict=True)):
-        if number not in found:
-            found[number] = parse(content, layout, stamp=stamp, interval=interval, arrival=arrival)
-    return [found[number] for number in range(len(contents))]
-
-
-def _batches(
-    contents: Sequence[bytes], layout: Layout
-) -> Iterator[tuple[list[int], list[Prepared]]]:
-    """Yield files that may be read as one, with their numbers, a bounded amount at a time."""
-    groups: dict[tuple[bytes, int], tuple[list[int], list[Prepared], int]] = {}
-    for number, content in enumerate(contents):
-        prepared = prepare(content, layout)
-        if prepared is None:
-            continue
-        key = (prepared.header_bytes, prepared.width)
-        numbers, batch, size = groups.setdefault(key, ([], [], 0))
-        numbers.append(number)
-        batch.append(prepared)
-        groups[key] = (numbers, batch, size + len(prepared.body))
-        if groups[key][2] >= BATCH_BYTES:
-            yield numbers, batch
-            del groups[key]
-    for numbers, batch, _ in groups.values():
-        yield numbers, batch
 
 
 def parse_careful(
@@ -217,12 +98,17 @@ class _Reading:
     declared: list[int] = field(default_factory=list)
     texts: list[str] = field(default_factory=list)
     values: list[list[float]] = field(default_factory=list)
+    tags: list[int] = field(default_factory=list)
+    doubtful: list[bool] = field(default_factory=list)
     problems: list[Problem] = field(default_factory=list)
+    unknown_tags: dict[str, tuple[int, int]] = field(default_factory=dict)
     skipped: int = 0
+    ignored: int = 0
+    """Those of the skipped lines that hold an ignored tag."""
     malformed: int = 0
 
     def __post_init__(self) -> None:
-        self.values = [[] for _ in self.rules.layout.columns]
+        self.values = [[] for _ in range(value_arrays(self.rules.layout))]
         if self.heading is not None:
             self.columns.update(index for _, index in self.heading.columns)
 
@@ -253,17 +139,31 @@ class _Reading:
         if isinstance(row, Malformed):
             self._malformed(number, row.reason, line)
             return ""
+        self._keep(row, number, self.heading)
+        return ""
+
+    def _keep(self, row: Row, number: int, heading: Heading) -> None:
+        """Keep a row, or count it where its tag says that it is not for reading."""
+        if row.tag == IGNORED_TAG:
+            self.skipped += 1
+            self.ignored += 1
+            return
+        if row.tag == UNKNOWN_TAG:
+            first, count = self.unknown_tags.get(row.tag_name, (number, 0))
+            self.unknown_tags[row.tag_name] = (first, count + 1)
+            return
         self.walls.append(row.wall or 0)
         self.readable.append(row.wall is not None)
         self.lines.append(number)
-        self.declared.append(len(self.heading.columns))
+        self.declared.append(len(heading.columns))
         self.texts.append(row.time_text)
+        self.tags.append(row.tag)
+        self.doubtful.append(row.doubtful)
         for values in self.values:
             values.append(math.nan)
-        for (_, index), value in zip(self.heading.columns, row.values, strict=True):
+        for (_, index), value in zip(heading.columns, row.values, strict=True):
             self.values[index][-1] = value
         self.problems.extend(row.problems)
-        return ""
 
     def _begin(self, cells: Sequence[str], number: int) -> str:
         """Take a line for a header; return why the file must be refused, '' if it need not."""
@@ -294,6 +194,8 @@ class _Reading:
             lines=np.array(self.lines, dtype=np.int64),
             declared=np.array(self.declared, dtype=np.int64),
             values=tuple(np.array(values, dtype=np.float64) for values in self.values),
+            tags=np.array(self.tags, dtype=np.int64),
+            doubtful=np.array(self.doubtful, dtype=np.bool_),
             time_text=self.texts.__getitem__,
         )
         file = FileRows(
@@ -306,6 +208,7 @@ class _Reading:
             lines_skipped=self.skipped,
             lines_malformed=self.malformed,
             problems=self.problems,
+            unknown_tags=self.unknown_tags,
         )
         return rows, file
 
@@ -314,7 +217,8 @@ def _warning(lines_read: int, reading: _Reading) -> str:
     """Return what is odd about a file that was read, '' if nothing."""
     if reading.heading is None:
         return "the file is empty" if not lines_read else "the file holds blank lines only"
-    return header_warning(reading.unknown, any_rows=bool(reading.lines or reading.malformed))
+    any_rows = bool(reading.lines or reading.malformed or reading.unknown_tags or reading.ignored)
+    return header_warning(reading.unknown, any_rows=any_rows)
 
 
 def _rejected(reason: str) -> ParsedFile:
