@@ -6,10 +6,12 @@ import hashlib
 from pathlib import Path, PurePath
 
 from meterfix.errors import SiteFileError
+from meterfix.intake.site.device_uncertainty import DeviceVersion
 from meterfix.intake.site.findings import Findings
 from meterfix.intake.site.gases import build_gas
 from meterfix.intake.site.meters import build_envelope, build_meter, check_use
 from meterfix.intake.site.secrets import anchored, check_database
+from meterfix.intake.site.shared_uncertainty import Known
 from meterfix.intake.site.signals import build_signals, quantities
 from meterfix.intake.site.sources import build_source
 from meterfix.intake.site.structure import read_tables
@@ -21,6 +23,7 @@ from meterfix.intake.site.terms import (
     build_contract,
     build_energy,
 )
+from meterfix.intake.site.uncertainty import collect
 from meterfix.model.site import Site
 
 
@@ -92,8 +95,10 @@ def _build(file: SiteFile, text: str, findings: Findings) -> Site | None:
     sources = [build_source(name, t, findings) for name, t in (file.source or {}).items()]
     signals = build_signals(file, findings)
     gases = [build_gas(name, t, energy, findings) for name, t in (file.gas or {}).items()]
+    devices: list[DeviceVersion] = []
     meters = [
-        build_meter(name, t, file, measured, findings) for name, t in (file.meter or {}).items()
+        build_meter(name, t, file, measured, devices, findings)
+        for name, t in (file.meter or {}).items()
     ]
     calendar = None if file.site is None else build_calendar(file.site, findings)
     envelopes = [
@@ -104,10 +109,19 @@ def _build(file: SiteFile, text: str, findings: Findings) -> Site | None:
     good_meters = tuple(meter for meter in meters if meter is not None)
     check_use(good_meters, signals, good_gases, findings)
     table = file.site
+    atmosphere = None if table is None else build_atmosphere(table, measured, findings)
+    known = Known(
+        measured=measured,
+        signals={signal.name: signal for signal in signals},
+        gases={gas.name: gas for gas in good_gases},
+        meters=good_meters,
+        devices=devices,
+        atmosphere=atmosphere,
+    )
+    collected, repeatability = collect(file, known, findings)
     if table is None:
         return None
     base = build_base_conditions(table, calendar, findings)
-    atmosphere = build_atmosphere(table, measured, findings)
     if table.database is not None:
         check_database(("site", "database"), table.database, findings)
     for key in ("name", "archive"):
@@ -133,9 +147,11 @@ def _build(file: SiteFile, text: str, findings: Findings) -> Site | None:
         meters=good_meters,
         envelopes=tuple(envelope for envelope in envelopes if envelope is not None),
         contract=contract,
+        uncertainty=collected.sources,
+        repeatability=repeatability,
         database_url=table.database,
         archive_folder=table.archive,
-        notes=tuple(findings.notes),
+        notes=(*findings.notes, *([] if collected.note is None else [collected.note])),
         digest=hashlib.sha256(text.encode("utf-8")).hexdigest(),
         text=text,
     )

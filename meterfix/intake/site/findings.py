@@ -11,15 +11,16 @@ from typing import TypeVar
 
 from meterfix import units
 from meterfix.errors import Mistake, UnitError
-from meterfix.model.calendar import SECOND, from_microseconds, to_microseconds
+from meterfix.model.calendar import SECOND, to_microseconds
 from meterfix.model.versions import Version, Versions
+from meterfix.model.wording import utc_text
 
 Place = tuple[str | int, ...]
 """Keys and list positions that lead to a value: ("meter", "FT-101", "orifice", "bore")."""
 
 Value = TypeVar("Value")
 
-_SECTIONS = ("source", "signal", "gas", "meter", "envelope")
+_SECTIONS = ("source", "signal", "gas", "meter", "envelope", "uncertainty")
 _BARE = re.compile(r"[A-Za-z0-9_-]+")
 
 
@@ -41,7 +42,7 @@ def where(file: str, place: Place) -> str:
 
 def instant_text(instant: int | None) -> str:
     """Return an instant [UTC us] as ISO 8601 text, or 'the beginning'."""
-    return "the beginning" if instant is None else from_microseconds(instant).isoformat()
+    return "the beginning" if instant is None else utc_text(instant)
 
 
 class Findings:

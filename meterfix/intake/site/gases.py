@@ -6,21 +6,17 @@ import math
 from fractions import Fraction
 from typing import Any, TypeVar
 
-from meterfix import units
-from meterfix.errors import UnitError
+from meterfix.intake.site.accuracy import relative_accuracy
+from meterfix.intake.site.calorific import build_calorific
 from meterfix.intake.site.findings import Findings, Place
-from meterfix.intake.site.shapes import BaseTable
-from meterfix.intake.site.tables import (
+from meterfix.intake.site.gas_tables import (
     COMPONENTS,
     CalorificTable,
     CompositionTable,
-    FixedFactorTable,
     GasTable,
+    ModelTable,
 )
-from meterfix.intake.site.terms import base_conditions
 from meterfix.model.gas import (
-    CalorificBasis,
-    CalorificKind,
     CalorificValue,
     Composition,
     DensityModel,
@@ -58,7 +54,9 @@ def build_gas(
         chosen = _at(methods, since)
         if composition is None or chosen is None:
             continue
-        built = _terms(composition, chosen, _at(calorific, since), findings)
+        built = _terms(
+            composition, chosen, _at(calorific, since), (*place, "calorific_value"), findings
+        )
         if built is not None:
             terms.append(Version(since, built))
     if len(findings.mistakes) > before:
@@ -174,6 +172,7 @@ def _terms(
     composition: Composition,
     methods: Methods,
     calorific: CalorificValue | None,
+    calorific_place: Place,
     findings: Findings,
 ) -> GasTerms | None:
     mixture = len(composition.fractions) > 1
@@ -195,6 +194,12 @@ def _terms(
                 f"'{model.model.value}' for air",
                 "use 'reference_equation', or give nitrogen, oxygen and argon",
             )
+    if air and calorific is not None and calorific.value is None:
+        findings.add(
+            calorific_place,
+            "a calorific value of air by ISO 6976:2016",
+            "leave [...calorific_value] out: air is no fuel",
+        )
     viscosity = _viscosity(*methods["dynamic_viscosity"], mixture=mixture, findings=findings)
     exponent = _exponent(*methods["isentropic_exponent"], models["line_model"], findings)
     line, base = models["line_model"], models["base_model"]
@@ -204,9 +209,8 @@ def _terms(
 
 
 def _model(place: Place, given: object, findings: Findings) -> DensityModel | None:
-    if isinstance(given, FixedFactorTable):
-        factor = given.fixed_compression_factor
-        return None if factor is None else DensityModel(StateModel.FIXED, factor)
+    if isinstance(given, ModelTable):
+        return _model_of_table(place, given, findings)
     if not isinstance(given, str):
         return None
     try:
@@ -214,6 +218,27 @@ def _model(place: Place, given: object, findings: Findings) -> DensityModel | No
     except ValueError:
         findings.add(place, f"'{given}'", f"use one of {', '.join(StateModel)}")
         return None
+
+
+def _model_of_table(place: Place, table: ModelTable, findings: Findings) -> DensityModel | None:
+    stated = table.model_fields_set & {"model", "fixed_compression_factor"}
+    if len(stated) != 1:
+        findings.add(
+            place,
+            " and ".join(sorted(stated)) or "neither a model nor a factor",
+            "give one of 'model' and 'fixed_compression_factor'",
+        )
+        return None
+    uncertainty = relative_accuracy(
+        (*place, "uncertainty"), table.uncertainty, None, "fraction", findings
+    )
+    if table.uncertainty is None and "uncertainty" in table.model_fields_set:
+        return None
+    if table.fixed_compression_factor is not None:
+        return DensityModel(StateModel.FIXED, table.fixed_compression_factor, uncertainty)
+    if table.model is None:
+        return None
+    return DensityModel(StateModel(table.model), None, uncertainty)
 
 
 def _viscosity(
@@ -268,96 +293,7 @@ def _calorific_values(
         return None if "calorific_value" in table.model_fields_set else Versions(())
     dated = [given] if isinstance(given, CalorificTable) else given
     entries = [
-        (where, entry.since, _calorific(where, entry, energy, findings))
+        (where, entry.since, build_calorific(where, entry, energy, findings))
         for where, entry in _with_places(at, given, dated)
     ]
     return findings.versions(at, entries, what="calorific value")
-
-
-def _calorific(
-    place: Place, table: CalorificTable, energy: EnergyTerms | None, findings: Findings
-) -> CalorificValue | None:
-    before = len(findings.mistakes)
-    value, basis = _value_and_basis((*place, "value"), table.value, findings)
-    reference = findings.quantity(
-        (*place, "combustion_reference_temperature"),
-        table.combustion_reference_temperature,
-        "temperature",
-        above=250.0,
-        below=320.0,
-        limit="a temperature such as '15 degC' or '25 degC' is needed",
-    )
-    at = (*place, "volume_base")
-    given: str | BaseTable | None = table.volume_base
-    volume_base = base_conditions(at, given, findings)
-    stated = "volume_base" in table.model_fields_set
-    if basis is CalorificBasis.VOLUME and not stated:
-        findings.add(at, "missing", "a value per m3 needs the pressure and temperature of the m3")
-    if basis is CalorificBasis.MASS and stated:
-        findings.add(at, "given with a value per mass", "leave it out")
-    if len(findings.mistakes) > before or table.kind is None:
-        return None
-    if value is None or basis is None or reference is None:
-        return None
-    kind = CalorificKind(table.kind)
-    if energy is not None:
-        _check_energy(place, basis, kind, reference, energy, findings)
-    if basis is CalorificBasis.VOLUME and volume_base is None:
-        return None
-    return CalorificValue(value, basis, kind, reference, volume_base)
-
-
-def _value_and_basis(
-    place: Place, text: str | None, findings: Findings
-) -> tuple[float | None, CalorificBasis | None]:
-    if text is None:
-        return None, None
-    choices: tuple[tuple[units.Dimension, CalorificBasis], ...] = (
-        ("energy_per_volume", CalorificBasis.VOLUME),
-        ("energy_per_mass", CalorificBasis.MASS),
-    )
-    given = ""
-    for dimension, basis in choices:
-        try:
-            value = units.parse(text, dimension)
-        except UnitError as error:
-            given = str(error).partition("; ")[0]
-            continue
-        if value <= 0.0:
-            findings.add(
-                place, f"'{text}'", "a calorific value is above 0; leave it out for no fuel"
-            )
-            return None, basis
-        return value, basis
-    findings.add(place, given, "give energy per volume or mass: '38.9 MJ/m3', '50.1 MJ/kg'")
-    return None, None
-
-
-def _check_energy(
-    place: Place,
-    basis: CalorificBasis,
-    kind: CalorificKind,
-    reference: float,
-    energy: EnergyTerms,
-    findings: Findings,
-) -> None:
-    """Refuse a value of another kind than the contract's: confusing them costs up to 10 %."""
-    if basis is not energy.way:
-        findings.add(
-            (*place, "value"),
-            f"a value per {basis.value}",
-            f"[contract.energy] reckons by {energy.way.value}: give a value per {energy.way.value}",
-        )
-    if kind is not energy.kind:
-        findings.add(
-            (*place, "kind"),
-            f"'{kind.value}'",
-            f"[contract.energy] reckons with '{energy.kind.value}' values: give one",
-        )
-    if reference != energy.combustion_reference_temperature:
-        wanted = units.render(energy.combustion_reference_temperature, "degC")
-        findings.add(
-            (*place, "combustion_reference_temperature"),
-            f"{units.render(reference, 'degC'):g} degC",
-            f"[contract.energy] has {wanted:g} degC: give the value for that temperature",
-        )

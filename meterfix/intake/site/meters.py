@@ -3,13 +3,21 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from typing import Any
 
+from meterfix.intake.site.device_tables import FAMILIES
+from meterfix.intake.site.device_uncertainty import DeviceVersion
+from meterfix.intake.site.devices import (
+    Fields,
+    build_device,
+    device_fields,
+    diameter_uncertainties,
+    label_of,
+    with_device,
+)
 from meterfix.intake.site.findings import Findings, Place, instant_text
-from meterfix.intake.site.tables import EnvelopeTable, MeterTable, OrificeTable, SiteFile
+from meterfix.intake.site.tables import EnvelopeTable, MeterTable, SiteFile
 from meterfix.intake.site.terms import at_edges, texts_with_places, value_place
 from meterfix.model.calendar import GasDayCalendar
-from meterfix.model.device import OrificePlate, Tappings
 from meterfix.model.gas import Gas
 from meterfix.model.site import (
     Envelope,
@@ -23,16 +31,12 @@ from meterfix.model.source import Quantity, Signal
 from meterfix.model.versions import Versions
 from meterfix.units import render
 
-Fields = dict[str, tuple[Place, Any]]
-"""Each key in force, where it was written and what was written."""
-
 _ROLES = {
     "differential_pressure": Quantity.DIFFERENTIAL_PRESSURE,
     "static_pressure": Quantity.STATIC_PRESSURE,
     "temperature": Quantity.TEMPERATURE,
 }
 _METER_KEYS = ("gas", *_ROLES, "static_pressure_tapping", "thermometer", "low_flow_cut_off")
-_ORIFICE_KEYS = tuple(OrificeTable.model_fields)
 
 
 def build_meter(
@@ -40,43 +44,69 @@ def build_meter(
     table: MeterTable,
     file: SiteFile,
     quantities: Mapping[str, Quantity | None],
+    devices: list[DeviceVersion],
     findings: Findings,
 ) -> Meter | None:
-    """Return one meter with every change of its terms."""
+    """Return one meter with every change of its terms.
+
+    What is stated of its devices' diameters is added to `devices`.
+    """
     place: Place = ("meter", name)
     before = len(findings.mistakes)
-    current: Fields = {key: ((*place, key), getattr(table, key)) for key in _METER_KEYS}
-    if table.orifice is not None:
-        at: Place = (*place, "orifice")
-        for key in table.orifice.model_fields_set:
-            current[f"orifice.{key}"] = ((*at, key), getattr(table.orifice, key))
+    given = device_fields(place, table, findings)
+    current: Fields = {key: ((*place, key), getattr(table, key)) for key in _METER_KEYS} | given
+    label = label_of({}, given, "", "") if any(key.endswith(".serial") for key in given) else ""
+    fields = [current]
     stages: list[tuple[Place, str | None, MeterTerms | None]] = [
-        (place, table.since, _terms(place, current, file, quantities, findings))
+        (place, table.since, _terms(place, current, label, file, quantities, findings))
     ]
     for n, change in enumerate(table.change or []):
-        at = (*place, "change", n)
+        at: Place = (*place, "change", n)
         overrides: Fields = {
             key: ((*at, key), getattr(change, key))
             for key in _METER_KEYS
             if key in change.model_fields_set
         }
-        if change.orifice is not None:
-            for key in change.orifice.model_fields_set:
-                overrides[f"orifice.{key}"] = ((*at, "orifice", key), getattr(change.orifice, key))
-        if not overrides and not change.model_fields_set & {*_METER_KEYS, "orifice"}:
-            findings.add(at, "changes nothing", f"give one of {', '.join(_METER_KEYS)}, orifice")
-        current = {**current, **overrides}
+        overrides |= device_fields(at, change, findings)
+        if not overrides and not change.model_fields_set & {*_METER_KEYS, *FAMILIES}:
+            findings.add(
+                at, "changes nothing", f"give one of {', '.join((*_METER_KEYS, *FAMILIES))}"
+            )
         if change.since is not None:
-            stages.append((at, change.since, _terms(place, current, file, quantities, findings)))
+            since = findings.instant((*at, "since"), change.since)
+            label = label_of(current, overrides, label, instant_text(since))
+        current = with_device(current, overrides)
+        if change.since is not None:
+            terms_then = _terms(place, current, label, file, quantities, findings)
+            stages.append((at, change.since, terms_then))
+            fields.append(current)
     terms = findings.versions(place, stages)
+    devices += _device_versions(name, place, terms, fields, findings)
     if terms is None or len(findings.mistakes) > before:
         return None
     return Meter(name, table.description or "", terms)
 
 
+def _device_versions(
+    name: str,
+    place: Place,
+    terms: Versions[MeterTerms] | None,
+    fields: Sequence[Fields],
+    findings: Findings,
+) -> list[DeviceVersion]:
+    """Return the meter's devices in order of time; `fields` are the keys in force with each."""
+    found: list[DeviceVersion] = []
+    for version, then in zip(terms.entries if terms else (), fields, strict=False):
+        device = version.value.device
+        bore, pipe = diameter_uncertainties(place, then, device, findings)
+        found.append(DeviceVersion(name, version.since, device, bore, pipe))
+    return found
+
+
 def _terms(
     place: Place,
     fields: Fields,
+    label: str,
     file: SiteFile,
     quantities: Mapping[str, Quantity | None],
     findings: Findings,
@@ -98,7 +128,7 @@ def _terms(
     cut_off = findings.quantity(
         at, text, "pressure", at_least=0.0, limit="a differential pressure of at least 0 is needed"
     )
-    device = _orifice(place, fields, findings)
+    device = build_device(place, fields, label, findings)
     named = [fields[key][1] for key in _METER_KEYS]
     if device is None or cut_off is None or None in named:
         return None
@@ -111,76 +141,6 @@ def _terms(
         static_pressure_tapping=Tapping(fields["static_pressure_tapping"][1]),
         thermometer=Thermometer(fields["thermometer"][1]),
         low_flow_cut_off=cut_off,
-    )
-
-
-def _orifice(place: Place, fields: Fields, findings: Findings) -> OrificePlate | None:
-    table: Place = (*place, "orifice")
-    given = {key: fields.get(f"orifice.{key}", ((*table, key), None)) for key in _ORIFICE_KEYS}
-    lengths = {
-        key: findings.quantity(*given[key], "length", above=0.0, limit="it must be above 0")
-        for key in ("bore", "pipe_diameter")
-    }
-    expansions = {
-        key: findings.quantity(
-            *given[key],
-            "per_temperature",
-            at_least=0.0,
-            below=1e-3,
-            limit="a metal has between 0 and 1e-3 / K",
-        )
-        for key in ("bore_expansion", "pipe_expansion")
-    }
-    temperatures = {
-        part: _reference_temperature(part, given, table, fields, findings)
-        for part in ("bore", "pipe")
-    }
-    bore, pipe = lengths["bore"], lengths["pipe_diameter"]
-    if bore is not None and pipe is not None and bore >= pipe:
-        findings.add(
-            given["bore"][0],
-            f"bore is {render(bore, 'mm'):g} mm in a pipe of {render(pipe, 'mm'):g} mm",
-            "it must be smaller than the pipe",
-        )
-        return None
-    tappings = given["tappings"][1]
-    values = [bore, pipe, *expansions.values(), *temperatures.values()]
-    numbers = [value for value in values if value is not None]
-    if len(numbers) < len(values) or tappings is None:
-        return None
-    return OrificePlate(
-        bore=numbers[0],
-        pipe_diameter=numbers[1],
-        tappings=Tappings(tappings),
-        bore_expansion=numbers[2],
-        pipe_expansion=numbers[3],
-        bore_reference_temperature=numbers[4],
-        pipe_reference_temperature=numbers[5],
-    )
-
-
-def _reference_temperature(
-    part: str,
-    given: Mapping[str, tuple[Place, Any]],
-    table: Place,
-    fields: Fields,
-    findings: Findings,
-) -> float | None:
-    """Return the part's own reference temperature, else the common one."""
-    own, common = f"{part}_reference_temperature", "reference_temperature"
-    key = own if f"orifice.{own}" in fields else common
-    if f"orifice.{key}" not in fields:
-        if any(name.startswith("orifice.") for name in fields):
-            findings.add(
-                (*table, common), "missing", "give one for both, or one for bore and pipe each"
-            )
-        return None
-    return findings.quantity(
-        *given[key],
-        "temperature",
-        above=200.0,
-        below=400.0,
-        limit="a temperature between 200 K and 400 K is needed",
     )
 
 

@@ -16,7 +16,9 @@ from pydantic import (
 )
 
 SINGLE, DATED, TEXT, TABLE, NUMBER = "=single", "=dated", "=text", "=table", "=number"
-"""Tags of alternatives; no key of a site file begins with '='."""
+WIDE, TAGS = "=wide", "=tags"
+ALTERNATIVES = frozenset({SINGLE, DATED, TEXT, TABLE, NUMBER, WIDE, TAGS})
+"""Marks of alternatives, which are no keys of a site file."""
 
 
 def _instant_as_text(given: object) -> object:
@@ -36,6 +38,12 @@ def _text_table_or_dated(given: Any) -> str:
     if isinstance(given, str):
         return TEXT
     return DATED if isinstance(given, list) else TABLE
+
+
+def wide_or_tags(given: Any) -> str:
+    """Tell a source of tag logs from one of wide logs."""
+    layout = given.get("layout") if isinstance(given, dict) else getattr(given, "layout", None)
+    return TAGS if layout == "tags" else WIDE
 
 
 def text_or_table(given: Any) -> str:
@@ -133,12 +141,40 @@ DatableBase = Annotated[
 ]
 
 
+Size = Annotated[
+    str,
+    Field(
+        description="a quantity, or a percentage of something; "
+        "'per' something where it grows with it",
+        examples=["0.3 K", "0.04 % of span", "0.02 % of span per 10 K"],
+    ),
+]
+
+
+class CoverageTable(Table):
+    """How many standard deviations a stated size is: `k`, or the form of its distribution."""
+
+    k: float | None = Field(None, gt=0, le=10, allow_inf_nan=False, description="coverage factor")
+    distribution: Literal["normal", "rectangular", "triangular"] | None = Field(
+        None, description="'rectangular': the size is a limit, divided by the root of 3"
+    )
+
+
+class AccuracyTable(CoverageTable):
+    """A stated uncertainty: its size and what that size covers."""
+
+    size: Size
+
+
 class AtmosphereTable(Table):
     """The atmospheric pressure: exactly one of a value, an elevation, a barometer."""
 
     value: Pressure | None = None
     elevation: Length | None = None
     barometer: str | None = Field(None, description="name of a signal")
+    uncertainty: AccuracyTable | None = Field(
+        None, description="of a value or elevation; a barometer's stands with its signal"
+    )
 
 
 class DatedAtmosphereTable(AtmosphereTable):

@@ -1,22 +1,24 @@
-"""Signals: measuring points, and the columns their readings come from."""
+"""Signals: measuring points, and the columns or tags their readings come from."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 
+from meterfix.intake.site.carry import cell_reach
 from meterfix.intake.site.findings import Findings, Place
 from meterfix.intake.site.shapes import DatedRange
-from meterfix.intake.site.sources import dimension_of
+from meterfix.intake.site.sources import cell_place, cells_of, dimension_of
 from meterfix.intake.site.tables import (
-    ColumnTable,
+    AnySource,
+    CellTable,
     OriginTable,
     SignalTable,
     SiteFile,
     SourceTable,
+    TagsTable,
 )
 from meterfix.model.calendar import SECOND
 from meterfix.model.source import (
-    Between,
     Excluded,
     Holds,
     Origin,
@@ -57,9 +59,14 @@ def quantities(file: SiteFile) -> dict[str, Quantity | None]:
     return found
 
 
-def _column(file: SiteFile, origin: OriginTable) -> ColumnTable | None:
+def _column(file: SiteFile, origin: OriginTable) -> CellTable | None:
     source = (file.source or {}).get(origin.source)
-    return None if source is None else (source.column or {}).get(origin.column)
+    return None if source is None else cells_of(source).get(_name_of(origin))
+
+
+def _name_of(origin: OriginTable) -> str:
+    """Return the column or tag that an origin names; '' where that cannot be told."""
+    return origin.column or origin.tag or ""
 
 
 def build_signals(file: SiteFile, findings: Findings) -> tuple[Signal, ...]:
@@ -92,7 +99,7 @@ def _signal(
 ) -> Signal | None:
     place: Place = ("signal", name)
     before = len(findings.mistakes)
-    found: list[tuple[OriginTable, SourceTable, ColumnTable]] = []
+    found: list[tuple[OriginTable, AnySource, CellTable]] = []
     for n, origin in enumerate(table.from_ or []):
         at = (*place, "from", n)
         _claim(at, name, origin, claims, findings)
@@ -110,18 +117,9 @@ def _signal(
         return None
     quantity = Quantity(column.quantity)
     ranges = _ranges(place, table, quantity, column, findings)
-    steps: Place = ("source", origin.source, "column", origin.column)
-    gap = findings.duration(
-        (*steps, "maximum_gap") if column.maximum_gap else ("source", origin.source, "maximum_gap"),
-        column.maximum_gap or source.maximum_gap,
-    )
-    age = gap
-    stated = column.maximum_age or source.maximum_age
-    if stated is not None:
-        at = steps if column.maximum_age else steps[:2]
-        age = findings.duration((*at, "maximum_age"), stated, positive=False)
-    _check_between(steps, source, column, findings)
-    if len(findings.mistakes) > before or ranges is None or gap is None or age is None:
+    steps = cell_place(origin.source, source, _name_of(origin))
+    reach = cell_reach(("source", origin.source), source, steps, column, findings)
+    if len(findings.mistakes) > before or ranges is None or reach is None:
         return None
     if source.stamp is None:
         return None
@@ -131,14 +129,14 @@ def _signal(
         gauge=column.reference == "gauge",
         rooted=column.root == "taken",
         holds=Holds(column.holds),
-        origins=tuple(Origin(o.source, o.binding, o.column) for o, _, _ in found),
+        origins=tuple(Origin(o.source, o.binding, _name_of(o)) for o, _, _ in found),
         transmitter=ranges,
         excluded=excluded,
         stamp=Stamp(source.stamp),
         interval=_interval(source),
-        between=Between(column.between or source.between or "hold"),
-        maximum_gap=gap,
-        maximum_age=age,
+        between=reach.between,
+        maximum_gap=reach.maximum_gap,
+        maximum_age=reach.maximum_age,
     )
 
 
@@ -149,17 +147,6 @@ def _interval(source: SourceTable) -> int | None:
     return Findings("").duration((), source.interval)
 
 
-def _check_between(
-    steps: Place, source: SourceTable, column: ColumnTable, findings: Findings
-) -> None:
-    if column.between == "linear" and source.stamp not in {None, "instant"}:
-        findings.add(
-            (*steps, "between"),
-            f"'linear' in a source with stamp '{source.stamp}'",
-            "an interval's value holds over it: say 'hold' or leave it out",
-        )
-
-
 def _claim(
     at: Place,
     name: str,
@@ -167,32 +154,43 @@ def _claim(
     claims: dict[tuple[str, str, str], str],
     findings: Findings,
 ) -> None:
-    if origin.source is None or origin.column is None or origin.binding is None:
+    cell = _name_of(origin)
+    if origin.source is None or not cell or origin.binding is None:
         return
-    key = (origin.source, origin.binding, origin.column)
+    key = (origin.source, origin.binding, cell)
     owner = claims.get(key)
     claims.setdefault(key, name)
     if owner is not None:
         whose = f"of binding '{origin.binding}' " if origin.binding else ""
+        kind = "column" if origin.column else "tag"
         findings.add(
             at,
-            f"column '{origin.column}' {whose}in source '{origin.source}' "
+            f"{kind} '{cell}' {whose}in source '{origin.source}' "
             f"is read by signal '{owner}' already",
-            "a column belongs to one signal, once; meters may share a signal",
+            f"a {kind} belongs to one signal, once; meters may share a signal",
         )
 
 
 def _origin(
     at: Place, origin: OriginTable, file: SiteFile, findings: Findings
-) -> tuple[SourceTable, ColumnTable] | None:
+) -> tuple[AnySource, CellTable] | None:
     sources = file.source or {}
-    if origin.source is None or origin.column is None:
+    if origin.source is None:
         return None
     if findings.reference((*at, "source"), origin.source, "source", sources) is None:
         return None
     source = sources[origin.source]
-    columns = source.column or {}
-    if findings.reference((*at, "column"), origin.column, "column", columns) is None:
+    key, other = ("tag", "column") if isinstance(source, TagsTable) else ("column", "tag")
+    if other in origin.model_fields_set:
+        layout = f"source '{origin.source}' has {key}s"
+        findings.add((*at, other), f"'{getattr(origin, other)}', but {layout}", f"name a {key}")
+        return None
+    if key not in origin.model_fields_set:
+        findings.add((*at, key), "missing", "this key is needed")
+        return None
+    cells = cells_of(source)
+    name = findings.reference((*at, key), getattr(origin, key), key, cells)
+    if name is None:
         return None
     if not origin.binding and source.files is not None and "{binding}" in source.files:
         findings.add(
@@ -204,14 +202,12 @@ def _origin(
         findings.add(
             (*at, "binding"), f"'{origin.binding}'", "none of * ? [ ] { } / \\ may be in it"
         )
-    return source, columns[origin.column]
+    return source, cells[name]
 
 
-def _meaning(source: SourceTable, column: ColumnTable) -> _Meaning:
-    def duration(text: str | None) -> int | None:
-        return None if text is None else Findings("").duration((), text, positive=False)
-
-    gap = column.maximum_gap or source.maximum_gap
+def _meaning(source: AnySource, column: CellTable) -> _Meaning:
+    # what is wrong with the source's own times is reported with the source
+    reach = cell_reach((), source, (), column, Findings(""))
     return _Meaning(
         column.quantity,
         column.reference,
@@ -219,14 +215,14 @@ def _meaning(source: SourceTable, column: ColumnTable) -> _Meaning:
         column.holds,
         source.stamp,
         _interval(source),
-        column.between or source.between,
-        duration(gap),
-        duration(column.maximum_age or source.maximum_age or gap),
+        None if reach is None else reach.between,
+        None if reach is None else reach.maximum_gap,
+        None if reach is None else reach.maximum_age,
     )
 
 
 def _agree(
-    place: Place, found: list[tuple[OriginTable, SourceTable, ColumnTable]], findings: Findings
+    place: Place, found: list[tuple[OriginTable, AnySource, CellTable]], findings: Findings
 ) -> None:
     meanings = [_meaning(source, column) for _, source, column in found]
     for n, meaning in enumerate(meanings[1:], start=1):
@@ -264,7 +260,7 @@ def _ranges(
     place: Place,
     table: SignalTable,
     quantity: Quantity,
-    column: ColumnTable,
+    column: CellTable,
     findings: Findings,
 ) -> Versions[Transmitter] | None:
     """Return the transmitter's ranges; a differential pressure needs one from the beginning."""
@@ -298,7 +294,7 @@ def _transmitter(
     at: Place,
     pair: list[str] | None,
     quantity: Quantity,
-    column: ColumnTable,
+    column: CellTable,
     findings: Findings,
 ) -> Transmitter | None:
     values = findings.pair(at, pair, dimension_of(quantity, rooted=False))

@@ -1,4 +1,4 @@
-"""Sources: where logs lie, how their bytes are laid out, what each column means."""
+"""Sources: where logs lie, how their bytes are laid out, what each column or tag means."""
 
 from __future__ import annotations
 
@@ -6,15 +6,18 @@ import re
 
 from meterfix import units
 from meterfix.errors import UnitError
+from meterfix.intake.site.carry import cell_reach, source_reach
 from meterfix.intake.site.findings import Findings, Place
-from meterfix.intake.site.tables import ColumnTable, SourceTable
+from meterfix.intake.site.tables import AnySource, CellTable, ColumnTable, SourceTable, TagsTable
+from meterfix.intake.site.tag_logs import check_tags, qualities
 from meterfix.intake.site.terms import zone_known
 from meterfix.model.source import (
-    Between,
     Column,
     Delivery,
     Holds,
     Layout,
+    LayoutKind,
+    Quality,
     Quantity,
     RepeatedHour,
     Source,
@@ -43,10 +46,21 @@ def dimension_of(quantity: Quantity, *, rooted: bool) -> units.Dimension:
     return "temperature" if quantity is Quantity.TEMPERATURE else "pressure"
 
 
+def cells_of(source: AnySource) -> dict[str, CellTable]:
+    """Return a source's columns, or its tags, by name."""
+    found = source.tag if isinstance(source, TagsTable) else source.column
+    return dict(found or {})
+
+
+def cell_place(name: str, source: AnySource, cell: str) -> Place:
+    """Return where a source's column or tag stands in the site file."""
+    return ("source", name, "tag" if isinstance(source, TagsTable) else "column", cell)
+
+
 def build_column(
-    place: Place, header: str, table: ColumnTable, stamp: str | None, findings: Findings
+    place: Place, header: str, table: CellTable, stamp: str | None, findings: Findings
 ) -> Column | None:
-    """Return one column; `stamp` is its source's."""
+    """Return one column or tag; `stamp` is its source's."""
     before = len(findings.mistakes)
     if table.quantity is None:
         return None
@@ -70,7 +84,7 @@ def build_column(
         except UnitError as error:
             given, _, allowed = str(error).partition("; ")
             if rooted:
-                allowed = "a rooted column is a fraction of full-scale flow: unit '1' or '%'"
+                allowed = "a rooted value is a fraction of full-scale flow: unit '1' or '%'"
             findings.add((*place, "unit"), given, allowed)
     gauge = table.reference == "gauge"
     kind = "rooted" if rooted else quantity.value
@@ -79,7 +93,8 @@ def build_column(
     plausible = findings.pair((*place, "plausible"), table.plausible, dimension) or PLAUSIBLE[kind]
     findings.duration((*place, "maximum_gap"), table.maximum_gap)
     findings.duration((*place, "maximum_age"), table.maximum_age, positive=False)
-    if len(findings.mistakes) > before or table.holds is None or table.required is None:
+    required = table.required if isinstance(table, ColumnTable) else False
+    if len(findings.mistakes) > before or table.holds is None or required is None:
         return None
     return Column(
         header=header,
@@ -89,14 +104,14 @@ def build_column(
         offset=offset,
         gauge=gauge,
         rooted=rooted,
-        required=table.required,
+        required=required,
         plausible_minimum=plausible[0],
         plausible_maximum=plausible[1],
     )
 
 
 def _check_reference(
-    place: Place, quantity: Quantity, table: ColumnTable, findings: Findings
+    place: Place, quantity: Quantity, table: CellTable, findings: Findings
 ) -> None:
     at = (*place, "reference")
     if quantity is Quantity.STATIC_PRESSURE:
@@ -110,16 +125,13 @@ def _check_reference(
         findings.add(at, f"'{table.reference}'", f"a {measured} has none; leave it out")
 
 
-def build_source(name: str, table: SourceTable, findings: Findings) -> Source | None:
+def build_source(name: str, table: AnySource, findings: Findings) -> Source | None:
     """Return one source of logs."""
     place: Place = ("source", name)
     before = len(findings.mistakes)
     _check_pattern(place, table, findings)
     interval = _interval(place, table, findings)
-    gap = findings.duration((*place, "maximum_gap"), table.maximum_gap)
-    age = gap
-    if table.maximum_age is not None:
-        age = findings.duration((*place, "maximum_age"), table.maximum_age, positive=False)
+    reach = source_reach(place, table, findings)
     settle = findings.duration((*place, "settle_time"), table.settle_time, positive=False)
     wait = findings.duration((*place, "unfinished_wait"), table.unfinished_wait, positive=False)
     layout = _layout(place, table, findings)
@@ -127,7 +139,7 @@ def build_source(name: str, table: SourceTable, findings: Findings) -> Source | 
         None not in {table.stamp, table.delivery, table.precedence, table.folder, table.files}
         and len(findings.mistakes) == before
     )
-    if not whole or gap is None or age is None or settle is None or wait is None or layout is None:
+    if not whole or reach is None or settle is None or wait is None or layout is None:
         return None
     return Source(
         name=name,
@@ -136,9 +148,9 @@ def build_source(name: str, table: SourceTable, findings: Findings) -> Source | 
         delivery=Delivery(table.delivery),
         stamp=Stamp(table.stamp),
         interval=interval,
-        between=Between(table.between or "hold"),
-        maximum_gap=gap,
-        maximum_age=age,
+        between=reach.between,
+        maximum_gap=reach.maximum_gap,
+        maximum_age=reach.maximum_age,
         settle_time=settle,
         unfinished_wait=wait,
         precedence=table.precedence,
@@ -172,7 +184,7 @@ def _interval(place: Place, table: SourceTable, findings: Findings) -> int | Non
             findings.add(
                 (*place, "interval"), f"'{table.interval}' with stamp 'instant'", "leave it out"
             )
-        if "between" not in table.model_fields_set:
+        if "between" not in table.model_fields_set and table.report == "periodic":
             findings.add((*place, "between"), "missing", "say 'linear' or 'hold'")
         return None
     if "interval" not in table.model_fields_set:
@@ -190,14 +202,21 @@ def _interval(place: Place, table: SourceTable, findings: Findings) -> int | Non
     return interval
 
 
-def _layout(place: Place, table: SourceTable, findings: Findings) -> Layout | None:
+def _layout(place: Place, table: AnySource, findings: Findings) -> Layout | None:
     earliest = findings.instant((*place, "earliest"), table.earliest)
     _check_marks(place, table, findings)
     _check_time(place, table, findings)
-    columns = [
-        build_column((*place, "column", header), header, column, table.stamp, findings)
-        for header, column in (table.column or {}).items()
-    ]
+    tags = table if isinstance(table, TagsTable) else None
+    codes: tuple[Quality, ...] = ()
+    if tags is not None:
+        check_tags(place, tags, findings)
+        codes = qualities(place, tags, findings)
+    columns = []
+    for header, column in cells_of(table).items():
+        at = cell_place(str(place[1]), table, header)
+        columns.append(build_column(at, header, column, table.stamp, findings))
+        if isinstance(table, TagsTable):
+            cell_reach(place, table, at, column, findings)
     good = [column for column in columns if column is not None]
     settled = None not in {
         table.encoding,
@@ -224,6 +243,12 @@ def _layout(place: Place, table: SourceTable, findings: Findings) -> Layout | No
         final_line_end_required=table.final_line_end == "required",
         earliest=earliest,
         size_limit=table.size_limit_bytes,
+        kind=LayoutKind.TAGS if isinstance(table, TagsTable) else LayoutKind.WIDE,
+        tag_column=tags.tag_column if tags else "",
+        value_column=tags.value_column if tags else "",
+        quality_column=(tags.quality_column or "") if tags else "",
+        qualities=codes,
+        ignored_tags=tuple(tags.ignored_tags or ()) if tags else (),
     )
 
 
@@ -245,8 +270,8 @@ def _check_marks(place: Place, table: SourceTable, findings: Findings) -> None:
             )
 
 
-def _check_time(place: Place, table: SourceTable, findings: Findings) -> None:
-    headers = list(table.column or {})
+def _check_time(place: Place, table: AnySource, findings: Findings) -> None:
+    headers = [] if isinstance(table, TagsTable) else list(table.column or {})
     for key, names in (
         ("time_columns", table.time_columns or []),
         ("ignored_columns", table.ignored_columns or []),

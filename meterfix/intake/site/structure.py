@@ -11,6 +11,7 @@ from pydantic import BaseModel, TypeAdapter, ValidationError
 from pydantic_core import ErrorDetails
 
 from meterfix.intake.site.findings import Findings, Place, suggestion
+from meterfix.intake.site.shapes import ALTERNATIVES
 from meterfix.intake.site.tables import SiteFile
 
 AnyTable = TypeVar("AnyTable", bound=BaseModel)
@@ -55,9 +56,7 @@ def read_tables(text: str, findings: Findings) -> SiteFile | None:
 
 def _report(detail: ErrorDetails, findings: Findings) -> None:
     """Tell one finding of pydantic in the words of a site file."""
-    place: Place = tuple(
-        step for step in detail["loc"] if not (isinstance(step, str) and step.startswith("="))
-    )
+    place: Place = tuple(step for step in detail["loc"] if step not in ALTERNATIVES)
     kind, given = detail["type"], _shown(detail["input"])
     context = detail.get("ctx", {})
     if place and place[-1] == "[key]":
@@ -99,7 +98,7 @@ def _keys_allowed(steps: tuple[int | str, ...]) -> list[str]:
     """Return the keys that the table at these steps may hold."""
     annotation: Any = SiteFile
     for step in steps:
-        if isinstance(step, str) and step.startswith("="):
+        if step in ALTERNATIVES:
             continue
         annotation = _inside(annotation, step)
     tables = _models(annotation)
@@ -137,6 +136,11 @@ def _models(annotation: Any) -> list[type[BaseModel]]:
     ]
 
 
+def _keys(table: type[BaseModel]) -> set[str]:
+    """Return the keys that a table may hold."""
+    return {field.alias or name for name, field in table.model_fields.items()}
+
+
 def _what_can_be_read(table: type[AnyTable], raw: dict[str, Any]) -> AnyTable:
     """Return a table whose unreadable values are None; known to be incomplete."""
     values: dict[str, Any] = {}
@@ -159,9 +163,11 @@ def _readable(annotation: Any, raw: Any) -> Any:
         return TypeAdapter(annotation).validate_python(raw, strict=True)
     except ValidationError:
         pass
+    tables = _models(annotation)
+    if isinstance(raw, dict) and tables:
+        # of several forms of a table, the one that knows most of the keys is meant
+        return _what_can_be_read(max(tables, key=lambda t: len(_keys(t) & raw.keys())), raw)
     for choice in _choices(annotation):
-        if isinstance(raw, dict) and _models(choice):
-            return _what_can_be_read(choice, raw)
         inner = get_args(choice)[-1] if get_args(choice) else None
         if isinstance(raw, dict) and get_origin(choice) is dict:
             # a named table that is no table stays, empty, so that its name is known

@@ -9,32 +9,34 @@ from __future__ import annotations
 
 from typing import Annotated, Any, Literal
 
-from pydantic import Discriminator, Field, Tag
+from pydantic import Discriminator, Field, Tag, WithJsonSchema
 
+from meterfix.intake.site.accuracy_tables import SharedTable, SpecificationTable
+from meterfix.intake.site.device_tables import (
+    NozzleChangeTable,
+    NozzleTable,
+    OrificeChangeTable,
+    OrificeTable,
+    VenturiChangeTable,
+    VenturiTable,
+)
+from meterfix.intake.site.gas_tables import GasTable
 from meterfix.intake.site.shapes import (
-    DATED,
-    NUMBER,
-    SINGLE,
-    TABLE,
-    TEXT,
-    Base,
+    TAGS,
+    WIDE,
+    AccuracyTable,
     DatableAtmosphere,
     DatableBase,
     DatableRange,
     DatableText,
     Duration,
-    Expansion,
     Instant,
-    Length,
     Name,
     Pair,
-    Percent,
     Pressure,
     Table,
     Temperature,
-    single_or_dated,
-    text_or_number,
-    text_or_table,
+    wide_or_tags,
 )
 
 
@@ -70,8 +72,8 @@ class ContractTable(Table):
     energy: EnergyTable | None = None
 
 
-class ColumnTable(Table):
-    """One column of a wide log."""
+class CellTable(Table):
+    """What the values of a column or tag mean."""
 
     quantity: Literal[
         "differential_pressure", "static_pressure", "temperature", "barometric_pressure"
@@ -82,23 +84,58 @@ class ColumnTable(Table):
     )
     holds: Literal["sample", "mean"] = "sample"
     root: Literal["not_taken", "taken"] = "not_taken"
-    required: bool = True
     plausible: Pair | None = None
     between: Literal["linear", "hold"] | None = None
     maximum_gap: Duration | None = None
     maximum_age: Duration | None = None
 
 
+class ColumnTable(CellTable):
+    """One column of a wide log."""
+
+    required: bool = True
+
+
+Report = Literal["periodic", "by_exception"]
+
+
+class TagTable(CellTable):
+    """One tag of a tag log."""
+
+    report: Report | None = Field(None, description="the source's, if left out")
+    maximum_silence: Duration | None = Field(
+        None, description="of a tag that reports by exception: how long it may be silent"
+    )
+
+
+class QualityTable(Table):
+    """What every code of the quality column says of the value beside it."""
+
+    good: list[str] = Field(default_factory=list)
+    doubtful: dict[str, str] = Field(
+        default_factory=dict, description="used with a flag; code = meaning"
+    )
+    bad: dict[str, str] = Field(default_factory=dict, description="set aside; code = meaning")
+
+
 class SourceTable(Table):
-    """A folder of logs of one kind."""
+    """A folder of logs of one kind: what both layouts have."""
 
     folder: str
     files: str = Field(description="shell pattern; {binding} tells whose file it is")
     delivery: Literal["whole", "appended"]
     stamp: Literal["instant", "interval_start", "interval_end"]
     interval: Duration | None = None
+    report: Report = Field(
+        "periodic",
+        description="'by_exception': a value is written only when it has changed by more than a "
+        "band, and holds until the next one",
+    )
+    maximum_silence: Duration | None = Field(
+        None, description="needed with report 'by_exception': what is silent longer is missing"
+    )
     between: Literal["linear", "hold"] | None = None
-    maximum_gap: Duration
+    maximum_gap: Duration | None = Field(None, description="needed unless report 'by_exception'")
     maximum_age: Duration | None = None
     precedence: int = Field(1, ge=0)
     settle_time: Duration = "5 s"
@@ -117,15 +154,42 @@ class SourceTable(Table):
     ignored_columns: list[str] = Field(default_factory=list)
     earliest: Instant = "1990-01-01T00:00:00+00:00"
     size_limit_bytes: int = Field(268_435_456, gt=0, description="after decompression")
+
+
+class WideTable(SourceTable):
+    """A source of logs with a row per time and a column per quantity."""
+
+    layout: Annotated[
+        Literal["wide", "tags"], WithJsonSchema({"const": "wide", "type": "string"})
+    ] = "wide"
     column: dict[str, ColumnTable] = Field(min_length=1)
 
 
+class TagsTable(SourceTable):
+    """A source of logs with a row per tag and time."""
+
+    layout: Literal["tags"]
+    tag_column: str = Field(description="header of the column that names the tag")
+    value_column: str = Field(description="header of the column that holds the value")
+    quality_column: str | None = Field(None, description="header of the column of quality codes")
+    quality: QualityTable | None = Field(None, description="needed with a quality column")
+    ignored_tags: list[str] = Field(default_factory=list)
+    tag: dict[str, TagTable] = Field(min_length=1)
+
+
+AnySource = Annotated[
+    Annotated[WideTable, Tag(WIDE)] | Annotated[TagsTable, Tag(TAGS)],
+    Discriminator(wide_or_tags),
+]
+
+
 class OriginTable(Table):
-    """Where a signal's readings come from."""
+    """Where a signal's readings come from: a column of a wide log, a tag of a tag log."""
 
     source: str
     binding: str = ""
-    column: str
+    column: str | None = Field(None, description="of a wide log: the header's text")
+    tag: str | None = Field(None, description="of a tag log")
 
 
 class ExcludedTable(Table):
@@ -142,135 +206,13 @@ class SignalTable(Table):
     from_: list[OriginTable] = Field(alias="from", min_length=1)
     range: DatableRange | None = Field(None, description="needed for a differential pressure")
     excluded: list[ExcludedTable] = Field(default_factory=list)
-
-
-class FixedFactorTable(Table):
-    """A compression factor that is itself the model."""
-
-    fixed_compression_factor: float = Field(gt=0, le=5, allow_inf_nan=False)
-
-
-Model = Annotated[
-    Annotated[Literal["aga8_detail", "gerg_2008", "reference_equation", "ideal"], Tag(TEXT)]
-    | Annotated[FixedFactorTable, Tag(TABLE)],
-    Discriminator(text_or_table),
-]
-Viscosity = Annotated[
-    str,
-    Field(
-        description="a dynamic viscosity, or 'reference_equation'",
-        examples=["0.0111 mPa s", "reference_equation"],
-    ),
-]
-Exponent = Annotated[
-    Annotated[Literal["equation_of_state", "ideal_gas"], Tag(TEXT)]
-    | Annotated[float, Field(gt=1, le=10, allow_inf_nan=False), Tag(NUMBER)],
-    Discriminator(text_or_number),
-]
-
-
-class CalorificTable(Table):
-    """A fixed calorific value, with everything that gives it its meaning."""
-
-    since: Instant | None = None
-    value: str = Field(examples=["38.9 MJ/m3", "50.1 MJ/kg"])
-    kind: Literal["gross", "net"]
-    combustion_reference_temperature: Temperature
-    volume_base: Base | None = Field(None, description="needed where it is per m3")
-
-
-DatableCalorific = Annotated[
-    Annotated[CalorificTable, Tag(SINGLE)] | Annotated[list[CalorificTable], Tag(DATED)],
-    Discriminator(single_or_dated),
-]
-
-
-class CompositionTable(Table):
-    """Fractions of the components, from an instant on."""
-
-    since: Instant | None = None
-    basis: Literal["mole", "mass"]
-    unit: Literal["%", "1"]
-    sum_tolerance: Percent = "0.1 %"
-    methane: float | None = None
-    nitrogen: float | None = None
-    carbon_dioxide: float | None = None
-    ethane: float | None = None
-    propane: float | None = None
-    isobutane: float | None = None
-    n_butane: float | None = None
-    isopentane: float | None = None
-    n_pentane: float | None = None
-    n_hexane: float | None = None
-    n_heptane: float | None = None
-    n_octane: float | None = None
-    n_nonane: float | None = None
-    n_decane: float | None = None
-    hydrogen: float | None = None
-    oxygen: float | None = None
-    carbon_monoxide: float | None = None
-    water: float | None = None
-    hydrogen_sulfide: float | None = None
-    helium: float | None = None
-    argon: float | None = None
-    air: float | None = Field(None, description="dry air as a whole, alone")
-
-
-COMPONENTS: tuple[str, ...] = tuple(CompositionTable.model_fields)[4:]
-"""Names of components: the 21 of AGA8 DETAIL in that report's order, and air."""
-
-DatableComposition = Annotated[
-    Annotated[CompositionTable, Tag(SINGLE)] | Annotated[list[CompositionTable], Tag(DATED)],
-    Discriminator(single_or_dated),
-]
-
-
-class GasChangeTable(Table):
-    """What changed in a gas's methods, from an instant on; the rest stays."""
-
-    since: Instant
-    line_model: Model | None = None
-    base_model: Model | None = None
-    dynamic_viscosity: Viscosity | None = None
-    isentropic_exponent: Exponent | None = None
-
-
-class GasTable(Table):
-    """A gas as the contract states it."""
-
-    line_model: Model
-    base_model: Model
-    dynamic_viscosity: Viscosity
-    isentropic_exponent: Exponent
-    composition: DatableComposition
-    calorific_value: DatableCalorific | None = None
-    change: list[GasChangeTable] = Field(default_factory=list)
-
-
-class OrificeTable(Table):
-    """An orifice plate in its pipe."""
-
-    tappings: Literal["corner", "D_and_D/2", "flange"]
-    bore: Length
-    pipe_diameter: Length
-    bore_expansion: Expansion
-    pipe_expansion: Expansion
-    reference_temperature: Temperature | None = None
-    bore_reference_temperature: Temperature | None = None
-    pipe_reference_temperature: Temperature | None = None
-
-
-class OrificeChangeTable(Table):
-    """What changed on an orifice plate; the rest stays."""
-
-    tappings: Literal["corner", "D_and_D/2", "flange"] | None = None
-    bore: Length | None = None
-    pipe_diameter: Length | None = None
-    bore_expansion: Expansion | None = None
-    pipe_expansion: Expansion | None = None
-    reference_temperature: Temperature | None = None
-    bore_reference_temperature: Temperature | None = None
-    pipe_reference_temperature: Temperature | None = None
+    upper_range_limit: str | None = Field(
+        None, description="the most that the transmitter could be set to"
+    )
+    uncertainty: list[SpecificationTable] = Field(default_factory=list)
+    repeatability: AccuracyTable | None = Field(
+        None, description="left out: estimated from successive readings"
+    )
 
 
 class MeterChangeTable(Table):
@@ -285,6 +227,8 @@ class MeterChangeTable(Table):
     thermometer: Literal["upstream", "downstream"] | None = None
     low_flow_cut_off: Pressure | None = None
     orifice: OrificeChangeTable | None = None
+    nozzle: NozzleChangeTable | None = None
+    venturi_tube: VenturiChangeTable | None = None
 
 
 class MeterTable(Table):
@@ -299,7 +243,9 @@ class MeterTable(Table):
     static_pressure_tapping: Literal["upstream", "downstream"]
     thermometer: Literal["upstream", "downstream"]
     low_flow_cut_off: Pressure
-    orifice: OrificeTable
+    orifice: OrificeTable | None = Field(None, description="one of the three devices is needed")
+    nozzle: NozzleTable | None = None
+    venturi_tube: VenturiTable | None = None
     change: list[MeterChangeTable] = Field(default_factory=list)
 
 
@@ -319,11 +265,14 @@ class SiteFile(Table):
 
     site: SiteTable
     contract: ContractTable = Field(default_factory=lambda: ContractTable.model_validate({}))
-    source: dict[Name, SourceTable] = Field(min_length=1)
+    source: dict[Name, AnySource] = Field(min_length=1)
     signal: dict[Name, SignalTable] = Field(min_length=1)
     gas: dict[Name, GasTable] = Field(min_length=1)
     meter: dict[Name, MeterTable] = Field(min_length=1)
     envelope: dict[Name, EnvelopeTable] = Field(default_factory=dict)
+    uncertainty: dict[Name, SharedTable] = Field(
+        default_factory=dict, description="causes that several of the others share"
+    )
 
 
 def schema() -> dict[str, Any]:

@@ -229,7 +229,7 @@ def _atmosphere(
     quantities: Mapping[str, Quantity | None],
     findings: Findings,
 ) -> Atmosphere | None:
-    keys = given.model_fields_set - {"since"}
+    keys = given.model_fields_set - {"since", "uncertainty"}
     if len(keys) != 1:
         found = " and ".join(f"'{key}'" for key in sorted(keys)) or "none of the three"
         findings.add(place, found, "give exactly one of 'value', 'elevation', 'barometer'")

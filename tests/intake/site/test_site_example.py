@@ -146,7 +146,8 @@ def test_meters_and_the_change_of_a_plate(site):
     assert version.value.thermometer is Thermometer.DOWNSTREAM
     before, after = second.terms.entries
     assert (before.since, after.since) == (None, 1_792_481_400 * SECOND)
-    assert after.value == replace(before.value, device=replace(before.value.device, bore=0.08002))
+    changed = replace(before.value.device, bore=0.08002, label="from 2026-10-20T07:30:00Z")
+    assert after.value == replace(before.value, device=changed)
     assert before.value.device.bore == 0.08005
 
 

@@ -76,7 +76,7 @@ def test_an_impossible_site_file_tells_everything_in_one_run(edited, mistakes_of
         ), name
     with pytest.raises(SiteFileError) as caught:
         site_from_text(text, "folder/site.toml")
-    assert str(caught.value).startswith(f"folder/site.toml: {len(found)} mistake(s)")
+    assert str(caught.value).startswith(f"folder/site.toml: {len(found)} mistakes")
     assert all(str(mistake) in str(caught.value) for mistake in found)
 
 

@@ -117,6 +117,7 @@ methane = 1
 """
 
 
+ELEVATION = 'elevation = "112 m"\nuncertainty = { size = "20 mbar", distribution = "rectangular" } '
 BAROMETER = """
 [source.station.column.b]
 quantity = "barometric_pressure"
@@ -243,7 +244,7 @@ def test_a_rooted_column_and_interval_stamps(edited):
 
 def test_a_barometer_gives_the_atmosphere(edited):
     """The atmospheric pressure may be a signal's, absolute without saying so."""
-    text = edited(('elevation = "112 m"', 'barometer = "BT-1"'), ("[signal.PDT-101]", BAROMETER))
+    text = edited((ELEVATION, 'barometer = "BT-1" '), ("[signal.PDT-101]", BAROMETER))
     site = site_from_text(text, "site.toml")
     assert site.atmosphere.in_force(0).signal == "BT-1"
     barometer = next(signal for signal in site.signals if signal.name == "BT-1")
