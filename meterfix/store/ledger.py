@@ -82,10 +82,7 @@ class Ledger:
         url = parsed_url(database_url)
         if not opening.is_ready(url, archive_folder):
             if read_only:
-                raise LedgerError(
-                    f"no ledger of this version at {url} with the archive {archive_folder}; "
-                    "processing logs makes one"
-                )
+                raise LedgerError(opening.why_not_ready(url, archive_folder))
             opening.prepare(url, archive_folder)
         return cls(url, archive_folder, read_only=read_only)
 

@@ -18,6 +18,7 @@ from sqlalchemy import Connection, select
 from sqlalchemy.exc import SQLAlchemyError
 
 from meterfix.errors import LedgerError
+from meterfix.model.wording import utc_text
 from meterfix.store import query
 from meterfix.store.anchor import Anchor, AnchorState
 from meterfix.store.archive import Archive
@@ -270,10 +271,22 @@ def _difference(connection: Connection, name: str, sequence: int, marks: str) ->
 
 
 def _named(name: str, row: Row) -> str:
+    """Return a row's key, its instants in ISO 8601 too, and its gas day where it has one."""
     names = [column.name for column in table_named(name).primary_key.columns]
-    return ", ".join(
-        f"{column}={value}" for column, value in zip(names, key_of(name, row), strict=True)
-    )
+    parts = []
+    for column, value in zip(names, key_of(name, row), strict=True):
+        iso = f" ({_instant(value)})" if column.endswith("_us") else ""
+        parts.append(f"{column}={value}{iso}")
+    if "gas_day" in row and "gas_day" not in names:
+        parts.append(f"gas day {row['gas_day']!s}")
+    return ", ".join(parts)
+
+
+def _instant(value: Any) -> str:
+    try:
+        return utc_text(value)
+    except (OverflowError, TypeError):
+        return "no instant at all"  # somebody put it there; the number stands beside it
 
 
 def _rows_of(connection: Connection, name: str, sequence: int) -> list[Row]:

@@ -11,7 +11,7 @@ from meterfix.store.engine import READER_PRAGMAS, read_pragmas
 from meterfix.store.migrate import LATEST_REVISION, database_revision
 from meterfix.store.proof_finding import Finding
 from meterfix.store.tables import INSERT_ONLY_TABLES, metadata
-from meterfix.store.triggers import postgresql_triggers, sqlite_triggers
+from meterfix.store.triggers import postgresql_triggers, sqlite_triggers, unique_keys
 
 
 def database_findings(connection: Connection) -> Iterator[Finding]:
@@ -47,7 +47,9 @@ def _sqlite_findings(connection: Connection) -> Iterator[Finding]:
 
 
 def _trigger_findings(connection: Connection) -> Iterator[Finding]:
-    expected = sqlite_triggers(INSERT_ONLY_TABLES)
+    expected = sqlite_triggers(
+        {name: unique_keys(metadata.tables[name]) for name in INSERT_ONLY_TABLES}
+    )
     found = {
         str(name): str(statement)
         for name, statement in connection.exec_driver_sql(

@@ -3,9 +3,10 @@
     meterfix readings 1 LF | length of the index, 8 bytes little-endian | index | rows
 
 The index is JSON: signal, first and last instant, first row, number of rows. A row is instant
-(int64), value (float64), delivery (int64), judgement (int64), implausible (uint8), little-endian
-and without gaps, so that the file's bytes are the canonical typed values and its hash is their
-digest. Readings never leave a file; a file can be made again from the raw bytes.
+(int64), value (float64), delivery (int64), judgement (int64), marks (uint8: 1 if implausible, plus
+2 if of doubtful quality), little-endian and without gaps, so that the file's bytes are the
+canonical typed values and its hash is their digest. Readings never leave a file; a file can be
+made again from the raw bytes.
 """
 
 from __future__ import annotations
@@ -25,13 +26,14 @@ from meterfix.frames import Floats, Instants, Integers, Truths
 from meterfix.store.values import canonical_json
 
 _MAGIC = b"meterfix readings 1\n"
+_IMPLAUSIBLE, _DOUBTFUL = 1, 2
 _ROW = np.dtype(
     [
         ("instant", "<i8"),
         ("value", "<f8"),
         ("delivery", "<i8"),
         ("judgement", "<i8"),
-        ("implausible", "u1"),
+        ("marks", "u1"),
     ]
 )
 
@@ -56,6 +58,7 @@ class RawReadings:
     """Sequence number of the delivery that brought the reading."""
     judgement: Integers
     """Number of the judgement of that delivery."""
+    doubtful: Truths
 
 
 def no_readings() -> RawReadings:
@@ -74,6 +77,7 @@ def joined(parts: Iterable[RawReadings]) -> RawReadings:
         np.concatenate([part.implausible for part in found]),
         np.concatenate([part.delivery for part in found]),
         np.concatenate([part.judgement for part in found]),
+        np.concatenate([part.doubtful for part in found]),
     )
 
 
@@ -114,7 +118,7 @@ def _rows(signal: str, readings: RawReadings) -> NDArray[np.void]:
         "value": readings.values,
         "delivery": readings.delivery,
         "judgement": readings.judgement,
-        "implausible": readings.implausible,
+        "marks": readings.implausible * _IMPLAUSIBLE + readings.doubtful * _DOUBTFUL,
     }
     rows = np.empty(count, dtype=_ROW)
     for name, column in columns.items():
@@ -128,7 +132,7 @@ def _rows(signal: str, readings: RawReadings) -> NDArray[np.void]:
         return rows
     # every column takes part, so that one set of readings has one order
     order = np.lexsort(
-        [rows["implausible"], rows["value"], rows["judgement"], rows["delivery"], rows["instant"]]
+        [rows["marks"], rows["value"], rows["judgement"], rows["delivery"], rows["instant"]]
     )
     sorted_rows: NDArray[np.void] = rows[order]
     return sorted_rows
@@ -175,7 +179,8 @@ def _raw(rows: NDArray[np.void]) -> RawReadings:
     return RawReadings(
         np.array(rows["instant"], dtype=np.int64),
         np.array(rows["value"], dtype=np.float64),
-        np.array(rows["implausible"]).astype(np.bool_),
+        np.array(rows["marks"] & _IMPLAUSIBLE).astype(np.bool_),
         np.array(rows["delivery"], dtype=np.int64),
         np.array(rows["judgement"], dtype=np.int64),
+        np.array(rows["marks"] & _DOUBTFUL).astype(np.bool_),
     )

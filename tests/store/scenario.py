@@ -41,6 +41,7 @@ def readings_of(sequence: int, name: str) -> RawReadings:
         np.zeros(count, dtype=np.bool_),
         np.full(count, sequence, dtype=np.int64),
         np.ones(count, dtype=np.int64),
+        np.zeros(count, dtype=np.bool_),
     )
 
 
@@ -169,7 +170,7 @@ def build_pass(ledger: Ledger, entries: list[PackEntry], clock: int) -> PassReco
     joined = RawReadings(
         *(
             np.concatenate([getattr(part, column) for part in parts])
-            for column in ("instants", "values", "implausible", "delivery", "judgement")
+            for column in ("instants", "values", "implausible", "delivery", "judgement", "doubtful")
         )
     )
     file, digest, spans = ledger.archive.write_readings(["dp"], {"dp": joined})

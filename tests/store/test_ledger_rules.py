@@ -4,11 +4,13 @@ import os
 import sqlite3
 import subprocess
 import sys
+import time
 import uuid
+from contextlib import closing
 from pathlib import Path
 
 import pytest
-from sqlalchemy import exc
+from sqlalchemy import Integer, exc
 
 from meterfix.errors import HeadMovedError, LedgerBusyError, LedgerError
 from meterfix.store import ledger as ledger_module
@@ -22,7 +24,8 @@ from meterfix.store.engine import (
 )
 from meterfix.store.ledger import PassRecord
 from meterfix.store.proof import check_store
-from meterfix.store.tables import INSERT_ONLY_TABLES, RECORD_TABLES
+from meterfix.store.tables import INSERT_ONLY_TABLES, RECORD_TABLES, metadata
+from meterfix.store.triggers import unique_keys
 
 ROOT = Path(__file__).parents[2]
 
@@ -139,6 +142,65 @@ def test_every_stored_row_refuses_change(ledger, tmp_path, scenario):
     engine.dispose()
     assert tried >= {"pass", "delivery", "fate", "set_aside", "total_revision", "audit"}
     assert check_store(ledger) == []
+
+
+def test_a_plain_connection_cannot_replace_rows(ledger, tmp_path, scenario):
+    """INSERT OR REPLACE under any unique key is refused without recursive_triggers too."""
+    scenario.run(ledger, scenario.arrivals(1), 1000)
+    tried = 0
+    with closing(sqlite3.connect(tmp_path / "site.sqlite")) as plain:
+        assert plain.execute("PRAGMA recursive_triggers").fetchone() == (0,)
+        for name in INSERT_ONLY_TABLES:
+            table = metadata.tables[name]
+            columns = [column.name for column in table.columns]
+            keys = unique_keys(table)
+            number = {
+                column.name
+                for key in keys
+                for column in map(table.columns.__getitem__, key)
+                if isinstance(column.type, Integer)
+            }
+            for key in keys if ledger.rows(name) else ():
+                # the same key, and another value in every other key
+                free = {c for other in keys if other != key for c in other} - {*key}
+                values = [
+                    c if c not in free else f'"{c}" + 1000' if c in number else f"\"{c}\" || 'x'"
+                    for c in columns
+                ]
+                listed = ", ".join(columns)
+                with pytest.raises(sqlite3.IntegrityError, match="never changed"):
+                    plain.execute(
+                        f'INSERT OR REPLACE INTO "{name}" ({listed}) '
+                        f'SELECT {", ".join(values)} FROM "{name}" LIMIT 1'
+                    )
+                tried += 1
+        with pytest.raises(sqlite3.IntegrityError, match="never changed"):
+            plain.execute(
+                "INSERT OR REPLACE INTO total_revision (rowid, meter, kind, period_start_us, "
+                "basis, revision, pass_sequence) SELECT rowid, meter, kind, period_start_us, "
+                "basis, revision + 1, pass_sequence FROM total_revision LIMIT 1"
+            )
+        plain.rollback()
+    assert tried >= 8
+    assert check_store(ledger) == []
+
+
+def test_the_guard_against_replacing_costs_little(ledger, tmp_path):
+    """10,000 rows with the guard take at most 0.5 s longer than without it."""
+    seconds = []
+    with closing(sqlite3.connect(tmp_path / "site.sqlite", isolation_level=None)) as plain:
+        for guarded in (True, False):
+            plain.execute("BEGIN")
+            if not guarded:
+                plain.execute("DROP TRIGGER conflict_refuses_replace")
+            begun = time.process_time()
+            plain.executemany(
+                "INSERT INTO conflict VALUES ('PT-1', ?, 1, '[]', 1.0, 'rule', 1)",
+                ((instant,) for instant in range(10_000)),
+            )
+            seconds.append(time.process_time() - begun)
+            plain.execute("ROLLBACK")
+    assert seconds[0] - seconds[1] < 0.5, seconds
 
 
 def test_settings_are_what_they_must_be(ledger, tmp_path):

@@ -68,6 +68,7 @@ def readings(instants, values, delivery):
         np.arange(count) % 2 == 1,
         np.full(count, delivery, dtype=np.int64),
         np.ones(count, dtype=np.int64),
+        np.arange(count) % 3 == 1,
     )
 
 
@@ -117,6 +118,16 @@ def test_readings_of_several_segments(ledger, scenario):
     assert not np.signbit(zero[0])
     assert found["p"].instants.dtype == np.int64
     assert found["p"].implausible.dtype == np.bool_
+    marks = [found["p"].implausible.tolist(), found["p"].doubtful.tolist()]
+    by_instant = sorted(zip(found["p"].values.tolist(), *marks, strict=True))
+    assert by_instant == [
+        (0.1, False, False),
+        (5.0, False, False),
+        (6.0, True, True),
+        (1e300, False, False),
+    ]
+    first = ledger.load_readings(["p"], 10, 10, up_to_pass=1)["p"]
+    assert (first.implausible.tolist(), first.doubtful.tolist()) == ([True], [True])
     assert check_store(ledger) == []
 
 
@@ -158,6 +169,7 @@ def test_one_set_of_readings_has_one_file(ledger):
         np.zeros(4, dtype=np.bool_),
         np.ones(4, dtype=np.int64),
         np.ones(4, dtype=np.int64),
+        np.zeros(4, dtype=np.bool_),
     )
     turned = RawReadings(
         plain.instants[::-1],
@@ -165,6 +177,7 @@ def test_one_set_of_readings_has_one_file(ledger):
         plain.implausible,
         plain.delivery,
         plain.judgement,
+        plain.doubtful,
     )
     first = ledger.archive.write_readings(["a", "b"], {"a": plain, "b": turned})
     second = ledger.archive.write_readings(["b", "a"], {"a": turned, "b": plain})

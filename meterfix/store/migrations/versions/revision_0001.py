@@ -24,22 +24,23 @@ BLOB = sa.LargeBinary()
 
 TYPES: dict[str, TypeEngine[Any]] = {"INTEGER": INTEGER, "REAL": REAL, "TEXT": TEXT, "BLOB": BLOB}
 
-INSERT_ONLY = (
-    "pass",
-    "alert",
-    "conflict",
-    "hourly_record",
-    "period_event",
-    "raw_object",
-    "site_version",
-    "alert_event",
-    "balance_revision",
-    "delivery",
-    "total_revision",
-    "fate",
-    "set_aside",
-    "audit",
-)
+INSERT_ONLY: dict[str, list[tuple[str, ...]]] = {
+    "pass": [("sequence",), ("id",)],
+    "alert": [("id",)],
+    "conflict": [("signal", "instant_us", "decision")],
+    "hourly_record": [("meter", "gas_day", "revision")],
+    "period_event": [("subject", "kind", "period_start_us", "number")],
+    "raw_object": [("sha256",)],
+    "site_version": [("digest",)],
+    "alert_event": [("alert_id", "number")],
+    "balance_revision": [("envelope", "kind", "period_start_us", "quantity", "basis", "revision")],
+    "delivery": [("sequence",), ("source", "binding", "name", "version")],
+    "total_revision": [("meter", "kind", "period_start_us", "basis", "revision")],
+    "fate": [("delivery_sequence", "judgement")],
+    "set_aside": [("delivery_sequence", "judgement", "line", "cell", "number")],
+    "audit": [("shard", "sequence"), ("shard", "previous_hash")],
+}
+"""Tables of record with the columns of their keys."""
 
 
 def columns(text: str) -> list[sa.Column[Any]]:
