@@ -7,6 +7,7 @@ from collections.abc import Mapping
 import numpy as np
 
 from meterfix.frames import Instants, ParsedFile
+from meterfix.model.wording import counted
 from meterfix.run.gather import Arrived, arrived_from, parse_arrived
 from meterfix.run.opening import OpenSite
 from meterfix.run.rejudge import read_raw, state_before
@@ -31,7 +32,7 @@ def absence_warning(opened: OpenSite, sequence: int, parsed: ParsedFile, fresh: 
     count = _absent(opened, parsed, replaces, fresh)
     if count == 0:
         return ""
-    return f"{count} reading(s) of the version before are absent from this one; they are kept"
+    return f"absent from this version, and kept: {counted(count, 'reading')} of the one before"
 
 
 def _absent(opened: OpenSite, parsed: ParsedFile, replaces: int, fresh: Fresh) -> int:

@@ -4,19 +4,43 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import date
 from typing import Any
 
 from meterfix.frames import HOURLY_INDEX, HourlyRecord
-from meterfix.model.calendar import HOUR, from_microseconds
+from meterfix.model.calendar import HOUR
+from meterfix.model.wording import counted, utc_text
 from meterfix.run.figures import Row
 from meterfix.store.ledger import Ledger
 
 DISPUTED = "disputed hour"
 QUARANTINED = "quarantined file"
 CLOCK_BEHIND = "clock behind"
+
+
+CONFLICTS_TOLD = 5
+"""Conflicting readings that the evidence of a disputed hour describes; it counts the others."""
+
+HOW_TO_SETTLE = (
+    "to settle it, deliver the file that is wrong again under its own name, with the right values "
+    "(a later delivery of a name wins over its earlier one), or give the sources different "
+    "precedence in the site file"
+)
+
+
+@dataclass(frozen=True)
+class News:
+    """An alert that a pass opened or closed."""
+
+    state: str
+    """'opened' or 'closed'."""
+    kind: str
+    subject: str
+    since: int
+    """UTC us."""
+    message: str
 
 
 @dataclass
@@ -27,6 +51,8 @@ class AlertBook:
     currency: str
     alerts: list[Row] = field(default_factory=list)
     events: list[Row] = field(default_factory=list)
+    news: list[News] = field(default_factory=list)
+    """What of it a user wants to be told at once."""
 
     def __post_init__(self) -> None:
         """Read the last event of every alert."""
@@ -58,15 +84,17 @@ class AlertBook:
             self.alerts.append(
                 {"id": identity, "kind": kind, "subject": subject, "since_us": since}
             )
-        self._event(
-            identity, "opened" if last is None else "updated", severity, message, shown, until
-        )
+        state = "opened" if last is None else "updated"
+        if last is None or last["state"] == "closed":
+            self.news.append(News("opened", kind, subject, since, message))
+        self._event(identity, state, severity, message, shown, until)
 
     def close(self, kind: str, subject: str, since: int, *, until: int, message: str) -> None:
         """Close an alert if it is open."""
         identity = alert_id(kind, subject, since)
         last = self._last.get(identity)
         if last is not None and last["state"] != "closed":
+            self.news.append(News("closed", kind, subject, since, message))
             self._event(identity, "closed", last["severity"], message, last["evidence"], until)
 
     def open_ones(self, kind: str) -> list[Row]:
@@ -110,8 +138,18 @@ def alert_id(kind: str, subject: str, since: int) -> str:
     return hashlib.sha256(f"{kind}\x1f{subject}\x1f{since}".encode()).hexdigest()[:16]
 
 
-def disputed_hours(book: AlertBook, record: HourlyRecord, gas_day: date) -> None:
-    """Open, update or close the alert of a meter's disputed hours in one gas day."""
+def disputed_hours(
+    book: AlertBook,
+    record: HourlyRecord,
+    gas_day: date,
+    conflicts: Callable[[], tuple[int, list[dict[str, Any]]]],
+) -> None:
+    """Open, update or close the alert of a meter's disputed hours in one gas day.
+
+    Parameters
+    ----------
+    conflicts : returns how many readings are disputed and the first of them; asked if any is.
+    """
     counts = record.statistics[:, HOURLY_INDEX["disputed_readings"]]
     hours = [n for n, count in enumerate(counts.tolist()) if count > 0]
     if not hours:
@@ -123,19 +161,25 @@ def disputed_hours(book: AlertBook, record: HourlyRecord, gas_day: date) -> None
             message="no reading of this gas day is disputed any more",
         )
         return
-    starts = [from_microseconds(record.start + n * HOUR).isoformat() for n in hours]
+    starts = [utc_text(record.start + n * HOUR) for n in hours]
     readings = int(sum(counts[n] for n in hours))
+    number, first = conflicts()
     book.raise_(
         DISPUTED,
         record.meter,
         record.start,
         severity="warning",
         message=(
-            f"{record.meter}, gas day {gas_day.isoformat()}: {readings} reading(s) in "
-            f"{len(hours)} hour(s) were delivered with different values; the lowest value stands "
-            "until a person decides"
+            f"{record.meter}, gas day {gas_day.isoformat()}: "
+            f"{counted(readings, 'reading')} in {counted(len(hours), 'hour')} delivered with "
+            f"different values, of which the lowest stands; {HOW_TO_SETTLE}"
         ),
-        evidence={"hours": starts, "readings": readings},
+        evidence={
+            "hours": starts,
+            "readings": readings,
+            "conflicts": number,
+            "first_conflicts": first,
+        },
     )
 
 
@@ -161,10 +205,10 @@ def clock(book: AlertBook, now: int, last_now: int) -> None:
             last_now,
             severity="error",
             message=(
-                f"the clock says {from_microseconds(now).isoformat()}, but the last pass ran at "
-                f"{from_microseconds(last_now).isoformat()}; nothing closes until it catches up"
+                f"the clock says {utc_text(now)}, but the last pass ran at "
+                f"{utc_text(last_now)}; nothing closes until it catches up"
             ),
-            evidence={"last_pass": from_microseconds(last_now).isoformat()},
+            evidence={"last_pass": utc_text(last_now)},
         )
         return
     for row in book.open_ones(CLOCK_BEHIND):

@@ -8,11 +8,18 @@ from dataclasses import dataclass, field
 from datetime import date
 from typing import Any
 
-from meterfix.calc.balance.envelopes import DayBalance, Verdict, day_balance
+from meterfix.calc.balance.envelopes import (
+    DayBalance,
+    Verdict,
+    day_balance,
+    why_no_uncertainty,
+)
 from meterfix.calc.balance.months import DayFigures, MonthBalance, month_balance
+from meterfix.calc.uncertainty import Doubt, add_up, hourly_standard_uncertainty
+from meterfix.frames import SENSITIVE, Floats, HourlyRecord
 from meterfix.model.calendar import SECOND, GasDayCalendar
 from meterfix.model.site import Envelope
-from meterfix.run.figures import BASIS, Row, terms_of
+from meterfix.run.figures import BASIS, Row, doubt_from, doubt_text, terms_of
 from meterfix.run.settle import Settled, Settling
 from meterfix.run.signals import SiteIndex
 from meterfix.store.values import encode_array
@@ -75,13 +82,13 @@ class Balances:
         book.load_records(days)
         self._load(open_rows, {day for _, month in months for day in calendar.month_days(month)})
         for name, day in sorted(wanted):
-            for quantity in envelopes[name].quantities:
-                self._store(self._day(envelopes[name], quantity, day))
+            for row in self._day(envelopes[name], day):
+                self._store(row)
         for name, month in sorted(months):
             for quantity in envelopes[name].quantities:
-                row = self._month(name, quantity, month)
-                if row is not None:
-                    self._store(row)
+                whole = self._month(name, quantity, month)
+                if whole is not None:
+                    self._store(whole)
 
     def _load(self, open_rows: Sequence[Row], days: set[date]) -> None:
         self.standing.update({_key(row): (row, 0) for row in open_rows})
@@ -93,22 +100,19 @@ class Balances:
         ):
             self.standing[_key(row)] = (row, row["revision"])
 
-    def _day(self, envelope: Envelope, quantity: str, day: date) -> Row:
-        book, calendar = self.settling.book, self.settling.index.site.calendar
-        start = calendar.start(day)
+    def _day(self, envelope: Envelope, day: date) -> list[Row]:
+        book = self.settling.book
         meters = meters_of(envelope)
-        balance = day_balance(
+        stored = {meter: book.days.get((meter, day)) for meter in meters}
+        links = [[meter, None if one is None else one.revision] for meter, one in stored.items()]
+        rows = day_rows(
+            self.settling.index,
             envelope,
-            quantity,
+            day,
             {meter: book.record(meter, day) for meter in meters},
-            envelope.tolerance.in_force(start),
+            {m: None if one is None else one.row["uncertainty"] for m, one in stored.items()},
         )
-        standing = [(meter, book.days.get((meter, day))) for meter in meters]
-        links = [[meter, None if one is None else one.revision] for meter, one in standing]
-        return {
-            **day_row(self.settling.index, balance, day),
-            "links": json.dumps(links),
-        }
+        return [{**row, "links": json.dumps(links)} for row in rows]
 
     def _month(self, name: str, quantity: str, month: date) -> Row | None:
         calendar = self.settling.index.site.calendar
@@ -160,8 +164,87 @@ def meters_of(envelope: Envelope) -> tuple[str, ...]:
     return (*envelope.inflow, *envelope.outflow, *envelope.vented)
 
 
-def day_row(index: SiteIndex, balance: DayBalance, day: date) -> Row:
-    """Return an envelope's balance of a gas day as a row, without its status and links."""
+def envelope_doubt(envelope: Envelope, stored: Mapping[str, str | None]) -> Doubt | None:
+    """Return what is not known of an envelope's imbalance; None where a meter's is not stored.
+
+    What meters of both sides share cancels as far as it can.
+    """
+    parts: list[tuple[float, Doubt]] = []
+    for sign, meter in signed_meters(envelope):
+        doubt = doubt_from(stored[meter])
+        if doubt is None:
+            return None
+        parts.append((sign, doubt))
+    return add_up(parts)
+
+
+def hourly_uncertainty(
+    index: SiteIndex, envelope: Envelope, records: Mapping[str, HourlyRecord | None]
+) -> Floats | None:
+    """Return the standard uncertainty of each hour's imbalance, (hours, len(SENSITIVE)).
+
+    None where a meter has no record, or one without sensitivities.
+    """
+    signed: list[tuple[float, HourlyRecord]] = []
+    for sign, meter in signed_meters(envelope):
+        record = records[meter]
+        if record is None or record.sensitivities is None:
+            return None
+        signed.append((sign, record))
+    if not signed:
+        return None
+    parameters = {parameter for _, record in signed for parameter in record.parameters}
+    return hourly_standard_uncertainty(signed, index.sources_of(parameters))
+
+
+def signed_meters(envelope: Envelope) -> list[tuple[float, str]]:
+    """Return the envelope's meters with the sign that they have in the imbalance."""
+    return [
+        *((1.0, meter) for meter in envelope.inflow),
+        *((-1.0, meter) for meter in (*envelope.outflow, *envelope.vented)),
+    ]
+
+
+def day_rows(
+    index: SiteIndex,
+    envelope: Envelope,
+    day: date,
+    records: Mapping[str, HourlyRecord | None],
+    uncertainties: Mapping[str, str | None],
+    quantities: Sequence[str] | None = None,
+) -> list[Row]:
+    """Return an envelope's balances of a gas day as rows, without their status and links.
+
+    Parameters
+    ----------
+    index, envelope, day : what is balanced.
+    records : the hours of every meter; None where there are none.
+    uncertainties : what is not known of every meter's day as it is stored; None likewise.
+    quantities : those wanted; None: all of the envelope's.
+    """
+    tolerance = envelope.tolerance.in_force(index.site.calendar.start(day))
+    doubt = envelope_doubt(envelope, uncertainties)
+    hourly = hourly_uncertainty(index, envelope, records)
+    return [
+        _day_row(
+            index,
+            day_balance(
+                envelope,
+                quantity,
+                records,
+                tolerance,
+                None if doubt is None else doubt.expanded_uncertainty(quantity),
+                None if hourly is None else hourly[:, SENSITIVE.index(quantity)],
+                () if doubt is None else doubt.unstated(quantity),
+            ),
+            day,
+            doubt,
+        )
+        for quantity in (envelope.quantities if quantities is None else quantities)
+    ]
+
+
+def _day_row(index: SiteIndex, balance: DayBalance, day: date, doubt: Doubt | None) -> Row:
     calendar = index.site.calendar
     start = calendar.start(day)
     stands_at = terms_of(index, start)
@@ -169,6 +252,7 @@ def day_row(index: SiteIndex, balance: DayBalance, day: date) -> Row:
     more = {
         "input": balance.reason,
         "hours": balance.hourly_verdict.reason,
+        "uncertainty": _unstated(doubt, balance.quantity),
         "input_by_hour": list(balance.hourly_reasons) if any(balance.hourly_reasons) else [],
     }
     return {
@@ -182,6 +266,7 @@ def day_row(index: SiteIndex, balance: DayBalance, day: date) -> Row:
         "storage_change": balance.storage_change,
         "measured_fraction": balance.measured_fraction,
         "hourly": encode_array(balance.hourly),
+        "uncertainty": None if balance.imbalance is None else doubt_text(doubt),
         **_figures(balance, more),
     }
 
@@ -196,6 +281,9 @@ def month_row(
     """Return an envelope's balance of a month as a row, from its gas days' rows."""
     month_days = calendar.month_days(month)
     start, end = calendar.start(month_days[0]), calendar.end(month_days[-1])
+    doubts = [doubt_from(row["uncertainty"]) for row in days if row["imbalance"] is not None]
+    known = [(1.0, doubt) for doubt in doubts if doubt is not None]
+    doubt = add_up(known) if known and len(known) == len(doubts) else None
     balance = month_balance(
         [
             DayFigures(
@@ -212,7 +300,10 @@ def month_row(
         ],
         [day.isoformat() for day in month_days],
         (end - start) / SECOND,
+        None if doubt is None else doubt.expanded_uncertainty(quantity),
+        () if doubt is None else doubt.unstated(quantity),
     )
+    more = {"input": balance.reason, "uncertainty": _unstated(doubt, quantity)}
     return {
         "envelope": envelope,
         "kind": "month",
@@ -225,7 +316,8 @@ def month_row(
         "storage_change": None,
         "measured_fraction": balance.measured_fraction,
         "hourly": None,
-        **_figures(balance, {"input": balance.reason}),
+        "uncertainty": doubt_text(doubt),
+        **_figures(balance, more),
     }
 
 
@@ -246,11 +338,18 @@ def _figures(balance: DayBalance | MonthBalance, more: Mapping[str, Any]) -> Row
         "outflow": balance.outflow,
         "vented": balance.vented,
         "imbalance": balance.imbalance,
+        "expanded_uncertainty": balance.expanded_uncertainty,
         "tolerance": balance.tolerance,
         "beyond_tolerance": _answer(balance.beyond_tolerance),
         "significant": _answer(balance.significant),
         "reason": json.dumps({k: v for k, v in reasons.items() if v}, sort_keys=True),
     }
+
+
+def _unstated(doubt: Doubt | None, quantity: str) -> str:
+    """Return why there is no uncertainty although something is known of it; '' if there is one."""
+    names = () if doubt is None else doubt.unstated(quantity)
+    return why_no_uncertainty(names) if names else ""
 
 
 def _base(row: Mapping[str, Any]) -> tuple[float, float] | None:

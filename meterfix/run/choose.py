@@ -27,6 +27,7 @@ class Candidates:
     implausible: Truths
     delivery: Integers
     judgement: Integers
+    doubtful: Truths
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,6 +51,7 @@ class Chosen:
     values: Floats
     implausible: Truths
     disputed: Truths
+    doubtful: Truths
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,6 +101,7 @@ def standing(candidates: Candidates, ranks: Ranks) -> Candidates:
         candidates.implausible[counts],
         candidates.delivery[counts],
         candidates.judgement[counts],
+        candidates.doubtful[counts],
     )
 
 
@@ -106,16 +109,18 @@ def choose(candidates: Candidates, ranks: Ranks) -> Chosen:
     """Return one reading per instant.
 
     Source precedence decides first; then, for one file name, the later delivery; else the
-    lowest value stands and the reading is marked disputed. Readings of a superseded judgement
-    or of a delivery without a rank do not count.
+    lowest value stands and the reading is marked disputed. Of equal values one of good quality
+    stands before a doubtful one. Readings of a superseded judgement or of a delivery without a
+    rank do not count.
     """
     candidates = standing(candidates, ranks)
     at = np.searchsorted(ranks.deliveries, candidates.delivery)
     instants = candidates.instants
     if len(instants) < 2 or bool((np.diff(instants) > 0).all()):
-        return _as_they_are(candidates)
+        return _as_they_are(candidates, slice(None))
     order = np.lexsort(
         (
+            candidates.doubtful,
             candidates.values,
             -ranks.version[at],
             ranks.name[at],
@@ -127,7 +132,7 @@ def choose(candidates: Candidates, ranks: Ranks) -> Chosen:
     first = np.ones(len(t), dtype=bool)
     first[1:] = t[1:] != t[:-1]
     if bool(first.all()):
-        return Chosen(t, v, candidates.implausible[order], np.zeros(len(t), dtype=bool))
+        return _as_they_are(candidates, order)
     group = np.cumsum(first) - 1
     starts = np.flatnonzero(first)
     # only the best precedence of each instant, and only the latest version of each name
@@ -139,7 +144,7 @@ def choose(candidates: Candidates, ranks: Ranks) -> Chosen:
     lead_of = np.maximum.accumulate(np.where(leads, np.arange(len(t)), 0))
     left = np.flatnonzero(best & (version == version[lead_of]))
     # what is left, grouped by instant: the lowest value stands, disputed if they differ
-    left = left[np.lexsort((v[left], t[left]))]
+    left = left[np.lexsort((candidates.doubtful[order][left], v[left], t[left]))]
     kept = np.ones(len(left), dtype=bool)
     kept[1:] = t[left][1:] != t[left][:-1]
     heads = np.flatnonzero(kept)
@@ -147,14 +152,19 @@ def choose(candidates: Candidates, ranks: Ranks) -> Chosen:
     disputed = v[left][lasts] != v[left][heads]
     chosen = order[left[heads]]
     return Chosen(
-        instants[chosen], candidates.values[chosen], candidates.implausible[chosen], disputed
+        instants[chosen],
+        candidates.values[chosen],
+        candidates.implausible[chosen],
+        disputed,
+        candidates.doubtful[chosen],
     )
 
 
-def _as_they_are(candidates: Candidates) -> Chosen:
+def _as_they_are(candidates: Candidates, order: Integers | slice) -> Chosen:
     return Chosen(
-        candidates.instants,
-        candidates.values,
-        candidates.implausible,
+        candidates.instants[order],
+        candidates.values[order],
+        candidates.implausible[order],
         np.zeros(len(candidates.instants), dtype=bool),
+        candidates.doubtful[order],
     )

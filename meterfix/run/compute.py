@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date
 
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.calc.totals import PeriodTotal, day_total, hourly_records
-from meterfix.frames import HourlyRecord, MeterDay
+from meterfix.calc.uncertainty import Doubt, day_doubt, hourly_standard_uncertainty
+from meterfix.frames import Floats, HourlyRecord, MeterDay
 from meterfix.run.days import input_digest, meter_day
 from meterfix.run.pool import Pool
 from meterfix.run.signals import SiteIndex
@@ -28,6 +29,10 @@ class Computed:
     digest: str
     record: HourlyRecord
     total: PeriodTotal
+    doubt: Doubt | None
+    """None where no sensitivities were computed."""
+    standard_uncertainty: Floats | None
+    """(hours, 3), see `frames.SENSITIVE`."""
 
 
 def compute(
@@ -57,13 +62,13 @@ def compute(
         if report is not None:
             report("computing gas days", number, len(by_day))
         for day in _meter_days(index, pool, gas_day, sorted(by_day[gas_day])):
-            digest = input_digest(day)
+            digest = input_digest(index, day)
             if known.get((day.meter, day.gas_day)) != digest:
                 batch.append((digest, day))
         if len(batch) >= BATCH:
-            results.update(_run(batch, gases))
+            results.update(_run(index, batch, gases))
             batch = []
-    results.update(_run(batch, gases))
+    results.update(_run(index, batch, gases))
     if report is not None:
         report("computing gas days", len(by_day), len(by_day))
     return results
@@ -81,9 +86,28 @@ def _meter_days(
         yield meter_day(index, index.meters[meter], gas_day, chosen)
 
 
-def _run(batch: list[tuple[str, MeterDay]], gases: GasLibrary) -> dict[Key, Computed]:
-    records = hourly_records([day for _, day in batch], gases)
+def _run(
+    index: SiteIndex, batch: list[tuple[str, MeterDay]], gases: GasLibrary
+) -> dict[Key, Computed]:
+    records = hours_of(index, [day for _, day in batch], gases)
     return {
-        (record.meter, record.gas_day): Computed(digest, record, day_total(record))
+        (record.meter, record.gas_day): computed(index, record, digest)
         for (digest, _), record in zip(batch, records, strict=True)
     }
+
+
+def hours_of(index: SiteIndex, days: Sequence[MeterDay], gases: GasLibrary) -> list[HourlyRecord]:
+    """Return the hours of meter-days with the sensitivities that the site's sources ask for."""
+    return hourly_records(
+        days, gases, components=index.components, repeatability=index.repeatability
+    )
+
+
+def computed(index: SiteIndex, record: HourlyRecord, digest: str) -> Computed:
+    """Return a meter-day's hours with its total and what is not known of it."""
+    doubt = uncertainty = None
+    if record.sensitivities is not None:
+        sources = index.sources_of(record.parameters)
+        doubt = day_doubt(record, sources)
+        uncertainty = hourly_standard_uncertainty([(1.0, record)], sources)
+    return Computed(digest, record, day_total(record), doubt, uncertainty)

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
 
 from meterfix.frames import Instants
+from meterfix.model.wording import utc_text
 from meterfix.run.choose import (
     RULE_LATER_VERSION,
     RULE_PRECEDENCE,
@@ -63,6 +64,67 @@ def conflict_rows(
                 }
             )
     return rows
+
+
+def disputes(
+    pool: Pool,
+    signals: Sequence[str],
+    window: tuple[int, int],
+    deliveries: Mapping[int, str],
+    at_most: int,
+) -> tuple[int, list[dict[str, Any]]]:
+    """Return how many readings of the signals are disputed in a window, and the first of them.
+
+    Parameters
+    ----------
+    pool : all readings.
+    signals : in the order in which they are told.
+    window : first and last instant [UTC us].
+    deliveries : what to call each delivery, by number.
+    at_most : how many are described.
+
+    Returns
+    -------
+    tuple of int and list of dict
+        Each with `signal`, `instant` (ISO, UTC), and `values`: SI values with their files.
+    """
+    number = 0
+    told: list[dict[str, Any]] = []
+    standing = pool.standing(signals, *window)
+    for signal, chosen in pool.chosen(signals, *window).items():
+        instants = chosen.instants[chosen.disputed]
+        number += len(instants)
+        for instant in instants[: at_most - len(told)].tolist():
+            values: dict[float, set[str]] = {}
+            for delivery, value in _rivals(standing[signal], pool.ranks, instant):
+                values.setdefault(value, set()).add(deliveries[delivery])
+            told.append(
+                {
+                    "signal": signal,
+                    "instant": utc_text(instant),
+                    "values": [
+                        {"value_SI": value, "files": sorted(files)}
+                        for value, files in sorted(values.items())
+                    ],
+                }
+            )
+    return number, told
+
+
+def _rivals(standing: Candidates, ranks: Ranks, instant: int) -> list[tuple[int, float]]:
+    """Return delivery and value of every candidate that neither rank nor version rules out."""
+    at = np.flatnonzero(standing.instants == instant)
+    places = np.searchsorted(ranks.deliveries, standing.delivery[at])
+    at = at[ranks.precedence[places] == ranks.precedence[places].min()]
+    places = np.searchsorted(ranks.deliveries, standing.delivery[at])
+    latest: dict[int, int] = {}
+    for name, version in zip(ranks.name[places], ranks.version[places], strict=True):
+        latest[int(name)] = max(int(version), latest.get(int(name), 0))
+    return [
+        (int(standing.delivery[n]), float(standing.values[n]))
+        for n, place in zip(at.tolist(), places.tolist(), strict=True)
+        if ranks.version[place] == latest[int(ranks.name[place])]
+    ]
 
 
 def _candidates(standing: Candidates, ranks: Ranks, instant: int) -> tuple[str, str]:

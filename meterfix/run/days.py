@@ -101,12 +101,13 @@ def eras_of(index: SiteIndex, meter: Meter, start: int, end: int) -> tuple[Era, 
                 differential_pressure_range=transmitter,
                 static_pressure_range=_transmitter(static, a),
                 temperature_range=_transmitter(temperature, a),
+                barometer=_in_force(site.atmosphere, a).signal,
             )
         )
     return tuple(eras)
 
 
-def input_digest(day: MeterDay) -> str:
+def input_digest(index: SiteIndex, day: MeterDay) -> str:
     """Return the SHA-256 of everything that the day's figures follow from, by typed value."""
     digest = hashlib.sha256()
 
@@ -114,6 +115,9 @@ def input_digest(day: MeterDay) -> str:
         digest.update(("\x1f".join(repr(part) for part in parts) + "\x1e").encode())
 
     text(day.meter, day.gas_day.isoformat(), day.start, day.end, day.eras)
+    subjects = subjects_of(index, day)
+    text("uncertainty", index.sources_on(subjects))
+    text("repeatability", {s: r for s, r in index.repeatability.items() if s in subjects})
     for role in ("differential_pressure", "static_pressure", "temperature", "barometer"):
         for start, end, series in getattr(day, role):
             excluded = tuple(x for x in series.excluded if x.end > day.start and x.start < day.end)
@@ -123,7 +127,22 @@ def input_digest(day: MeterDay) -> str:
             digest.update(np.ascontiguousarray(series.values, dtype="<f8").tobytes())
             digest.update(np.ascontiguousarray(series.disputed, dtype=np.uint8).tobytes())
             digest.update(np.ascontiguousarray(series.implausible, dtype=np.uint8).tobytes())
+            if series.doubtful is not None and series.doubtful.any():
+                text("doubtful")
+                digest.update(np.ascontiguousarray(series.doubtful, dtype=np.uint8).tobytes())
     return digest.hexdigest()
+
+
+def subjects_of(index: SiteIndex, day: MeterDay) -> tuple[str, ...]:
+    """Return the names under which sources of uncertainty act on the day, see PARAMETERS."""
+    found: set[str] = set()
+    for era in day.eras:
+        found.update(signals_in(era.meter))
+        found.add(f"{day.meter} {era.meter.device.label}".strip())
+        found.add(era.meter.gas)
+        atmosphere = _in_force(index.site.atmosphere, era.start).signal
+        found.add("site" if atmosphere is None else f"barometer {atmosphere}")
+    return tuple(sorted(found))
 
 
 def _parts(
@@ -162,9 +181,10 @@ def _series(
     at = at[first:last]
     if chosen is None:
         values, disputed, implausible = np.zeros(0), empty.astype(bool), empty.astype(bool)
+        doubtful = implausible
     else:
         values, disputed = chosen.values[at], chosen.disputed[at]
-        implausible = chosen.implausible[at]
+        implausible, doubtful = chosen.implausible[at], chosen.doubtful[at]
     return Series(
         instants=np.ascontiguousarray(instants[at]),
         values=np.ascontiguousarray(values),
@@ -178,6 +198,7 @@ def _series(
         ),
         excluded=_near(signal.excluded, start - reach, end + reach),
         mean_values=signal.holds is Holds.MEAN,
+        doubtful=np.ascontiguousarray(doubtful),
     )
 
 

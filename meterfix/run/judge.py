@@ -10,7 +10,8 @@ from typing import Any
 import numpy as np
 
 from meterfix.frames import Cells, Instants, Integers, ParsedFile, Problem, Truths
-from meterfix.model.source import Origin
+from meterfix.model.source import LayoutKind, Origin
+from meterfix.model.wording import counted
 from meterfix.run.pool import Pool
 from meterfix.run.signals import SiteIndex
 from meterfix.store.readings import RawReadings
@@ -39,7 +40,7 @@ class Verdicts:
     """Every usable cell by signal, duplicates included: which of two equal readings counts may
     change when one of them is replaced."""
     fresh: int
-    """Cells that say something new."""
+    """Cells of newly arrived files that say something new; files judged again do not count."""
     contested: dict[str, Instants]
     """Instants at which a signal now has different values, some of them from these files."""
 
@@ -56,13 +57,19 @@ def judge(files: Sequence[Judged], index: SiteIndex, pool: Pool, site_digest: st
         used = np.zeros(0, dtype=np.int64)
         candidates = np.zeros(0, dtype=np.int64)
         fresh = duplicate = 0
-        for cells, new in zip(place.cells, new_cells[number], strict=True):
-            candidates = np.union1d(candidates, cells.lines)
-            used = np.union1d(used, cells.lines[new])
-            fresh += int(new.sum())
-            duplicate += int((~new).sum())
+        if place.cells:
+            news = new_cells[number]
+            candidates = np.unique(np.concatenate([cells.lines for cells in place.cells]))
+            used = np.unique(
+                np.concatenate(
+                    [cells.lines[new] for cells, new in zip(place.cells, news, strict=True)]
+                )
+            )
+            fresh = sum(int(new.sum()) for new in news)
+            duplicate = sum(int((~new).sum()) for new in news)
         orphan_lines = len(np.setdiff1d(place.orphan_lines, candidates))
-        fresh_total += fresh
+        if file.judgement == 1:
+            fresh_total += fresh
         verdict = "rejected" if parsed.rejected else "accepted"
         fates.append(
             {
@@ -97,6 +104,9 @@ def readings_digest(parsed: ParsedFile) -> str:
         digest.update(np.ascontiguousarray(cells.values, dtype="<f8").tobytes())
         digest.update(np.ascontiguousarray(cells.lines, dtype="<i8").tobytes())
         digest.update(np.ascontiguousarray(cells.implausible, dtype=np.uint8).tobytes())
+        if cells.doubtful.any():
+            digest.update(b"doubtful")
+            digest.update(np.ascontiguousarray(cells.doubtful, dtype=np.uint8).tobytes())
     return digest.hexdigest()
 
 
@@ -156,13 +166,15 @@ def _place(file: Judged, index: SiteIndex) -> _Placed:
             continue
         orphan_cells += len(column.lines)
         orphan_lines = np.union1d(orphan_lines, column.lines)
+        what = "tag" if index.sources[file.source].layout.kind is LayoutKind.TAGS else "column"
         whose = f" of {file.binding!r}" if file.binding else ""
         problems.append(
             Problem(
                 line=0,
                 cell=column.column,
-                reason=f"no signal of the site file takes column {column.column!r}{whose}; "
-                f"{len(column.lines)} cells are kept and judged again once one does",
+                reason=f"no signal of the site file takes {what} {column.column!r}{whose}; "
+                f"{counted(len(column.lines), 'cell is', 'cells are')} kept "
+                "and judged again once one does",
                 text=b"",
             )
         )
@@ -234,6 +246,7 @@ def _readings(files: Sequence[Judged], placed: Sequence[_Placed]) -> dict[str, R
                     cells.implausible,
                     np.full(count, file.sequence, dtype=np.int64),
                     np.full(count, file.judgement, dtype=np.int64),
+                    cells.doubtful,
                 )
             )
     return {
@@ -243,6 +256,7 @@ def _readings(files: Sequence[Judged], placed: Sequence[_Placed]) -> dict[str, R
             np.concatenate([p.implausible for p in some]),
             np.concatenate([p.delivery for p in some]),
             np.concatenate([p.judgement for p in some]),
+            np.concatenate([p.doubtful for p in some]),
         )
         for signal, some in parts.items()
     }

@@ -7,17 +7,18 @@ import uuid
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import date
+from functools import partial
 from typing import Any
 
 from meterfix.calc.gas.properties import GasLibrary
-from meterfix.frames import CALCULATION_VERSION
+from meterfix.frames import CALCULATION_VERSION, HourlyRecord
 from meterfix.run import alerts, clock
 from meterfix.run.absent import absence_warning
 from meterfix.run.attempts import Attempts
 from meterfix.run.balances import Balances
 from meterfix.run.book import Book
 from meterfix.run.compute import Key, Report, compute
-from meterfix.run.conflicts import conflict_rows
+from meterfix.run.conflicts import conflict_rows, disputes
 from meterfix.run.figures import Row, version_columns
 from meterfix.run.gather import (
     Arrived,
@@ -28,6 +29,14 @@ from meterfix.run.gather import (
 )
 from meterfix.run.judge import Judged, Verdicts, judge
 from meterfix.run.opening import OpenSite
+from meterfix.run.outcome import (
+    Outcome,
+    fact_text,
+    held_text,
+    quarantined,
+    rejected_text,
+    waiting_text,
+)
 from meterfix.run.periods import filled, in_service, touched
 from meterfix.run.pool import Pool, ranks_as_of
 from meterfix.run.rejudge import Again, to_judge_again
@@ -36,24 +45,6 @@ from meterfix.store.fingerprint import fingerprint
 from meterfix.store.ledger import Ledger, PassRecord
 
 ACTOR = "meterfix"
-NAMED_AT_CLOSE = 3
-"""Waiting files that the reason of a close names; of more it gives the number."""
-
-
-@dataclass(frozen=True)
-class Outcome:
-    """What a pass did."""
-
-    sequence: int
-    """Of the pass; 0 if it changed nothing."""
-    more: bool
-    """There is work left for another pass."""
-    files: int = 0
-    readings: int = 0
-    days: int = 0
-    rejected: tuple[str, ...] = ()
-    """Whole files that could not be used, each with its reason."""
-    waiting: tuple[str, ...] = ()
 
 
 @dataclass
@@ -68,6 +59,8 @@ class PassWork:
     known: Known = field(init=False)
     attempts: Attempts | None = field(default=None, init=False)
     """None until the pass knows its files."""
+    facts: tuple[str, ...] = field(default=(), init=False)
+    """What start-up found and this pass has chained."""
     storing: bool = False
     """The files have been read and their figures computed; what fails now is not theirs."""
 
@@ -77,6 +70,7 @@ class PassWork:
         facts = ledger.recover()
         if facts:
             self._commit_facts(facts)
+            self.facts = tuple(fact_text(fact) for fact in facts)
         self.known = Known.of(ledger)
         passes = ledger.rows("pass", order=("sequence",), columns=("now_us", "note"))
         last_now = max((row["now_us"] for row in passes), default=0)
@@ -106,15 +100,37 @@ class PassWork:
         for meter, day in sorted(settled.changed_days):
             record = book.record(meter, day)
             if record is not None:
-                alerts.disputed_hours(alert_book, record, day)
-        alerts.quarantined(alert_book, _quarantined(taken.arrived, rows), self.now)
+                alerts.disputed_hours(
+                    alert_book, record, day, partial(self._disputes, record, pool, rows["delivery"])
+                )
+        alerts.quarantined(alert_book, quarantined(taken.arrived, rows), self.now)
         alerts.clock(alert_book, self.now, last_now)
         for table, added in settled.rows.items():
             rows.setdefault(table, []).extend(added)
         rows["alert"] = alert_book.alerts
         rows["alert_event"] = alert_book.events
         self.storing = True
-        return self._commit(rows, settled, taken, verdicts, more=more)
+        return self._commit(rows, settled, taken, verdicts, alert_book.news, more=more)
+
+    def _disputes(
+        self, record: HourlyRecord, pool: Pool, fresh: Sequence[Row]
+    ) -> tuple[int, list[dict[str, Any]]]:
+        """Return the disputed readings of a meter-day: inside it, else those that reach into it."""
+        index, ledger = self.opened.index, self.opened.ledger
+        meter = index.meters[record.meter]
+        names = {
+            row["sequence"]: f"{row['source']}: {row['name']}"
+            for row in (*ledger.rows("delivery", columns=("sequence", "source", "name")), *fresh)
+        }
+        first, last = record.start, index.site.calendar.end(record.gas_day)
+        found: tuple[int, list[dict[str, Any]]] = (0, [])
+        for reach in (0, index.reach(meter)):
+            window = (first - reach, last + reach)
+            signals = index.signals_of(meter)
+            found = disputes(pool, signals, window, names, alerts.CONFLICTS_TOLD)
+            if found[0]:
+                break
+        return found
 
     # --- taking files in ---------------------------------------------------------------------
 
@@ -258,7 +274,7 @@ class PassWork:
             if key not in forced
         }
         computed = compute(index, pool, wanted, known, self.gases, self.report)
-        held = _held_text(waiting)
+        held = held_text(waiting)
         settling = Settling(
             index=index,
             ledger=ledger,
@@ -283,6 +299,7 @@ class PassWork:
         settled: Settled,
         taken: Slice,
         verdicts: Verdicts,
+        news: Sequence[alerts.News],
         *,
         more: bool,
     ) -> Outcome:
@@ -299,7 +316,7 @@ class PassWork:
                     "heartbeat": [heartbeat(self.now, "")],
                 }
             )
-            return Outcome(0, more, waiting=_waiting_text(taken))
+            return Outcome(0, more, waiting=waiting_text(taken))
         sequence = ledger.head().sequence + 1
         fresh_raw = {row["sha256"] for row in rows["raw_object"]}
         locations = ledger.archive.write_pack(
@@ -315,6 +332,7 @@ class PassWork:
         remove["attempt"] = [
             {"source": f.source, "binding": f.binding, "name": f.name} for f in taken.arrived
         ]
+        again = len(rows["fate"]) - len(taken.arrived)
         pass_id = str(uuid.uuid4())
         rows["pass"] = [
             {
@@ -327,7 +345,7 @@ class PassWork:
                 "files": len(taken.arrived),
                 "readings": verdicts.fresh,
                 "days": len(settled.changed_days),
-                "note": json.dumps({"site": site.digest}),
+                "note": json.dumps({"site": site.digest, "judged_again": again}),
             }
         ]
         ledger.commit(
@@ -348,9 +366,11 @@ class PassWork:
             more,
             files=len(taken.arrived),
             readings=verdicts.fresh,
+            judged_again=again,
             days=len(settled.changed_days),
-            rejected=_rejected_text(taken.arrived, rows["fate"]),
-            waiting=_waiting_text(taken),
+            rejected=rejected_text(taken.arrived, rows["fate"]),
+            waiting=waiting_text(taken),
+            alerts=tuple(news),
         )
 
     def _store_readings(self, sequence: int, verdicts: Verdicts) -> dict[str, list[Row]]:
@@ -461,40 +481,3 @@ def _delivery_row(file: Arrived, sequence: int, replaces: int, after: Mapping[st
 
 def _waiting_key(row: Mapping[str, Any]) -> tuple[str, str, str]:
     return (row["source"], row["binding"], row["name"])
-
-
-def _held_text(waiting: Sequence[Row]) -> str:
-    """Return what a close says of files that waited when it was due; '' if none did."""
-    if not waiting:
-        return ""
-    named = [f"{row['source']}: {row['name'] or 'its folder'}" for row in waiting[:NAMED_AT_CLOSE]]
-    more = len(waiting) - len(named)
-    return f"; without {', '.join(named)}" + (f" and {more} more" if more else "")
-
-
-def _waiting_text(taken: Slice) -> tuple[str, ...]:
-    return tuple(f"{row['source']}: {row['name']}: {row['reason']}" for row in taken.waiting)
-
-
-def _rejected_text(arrived: Sequence[Arrived], fates: Sequence[Row]) -> tuple[str, ...]:
-    return tuple(
-        f"{file.source}: {file.name}: {fate['reason']}"
-        for file, fate in zip(arrived, fates, strict=False)
-        if fate["verdict"] != "accepted"
-    )
-
-
-def _quarantined(
-    arrived: Sequence[Arrived], rows: Mapping[str, Sequence[Row]]
-) -> list[Mapping[str, Any]]:
-    return [
-        {
-            "source": file.source,
-            "name": file.name,
-            "raw_sha256": file.raw_sha256,
-            "reason": file.quarantined,
-            "delivery": row["sequence"],
-        }
-        for file, row in zip(arrived, rows["delivery"], strict=True)
-        if file.quarantined
-    ]

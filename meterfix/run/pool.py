@@ -60,19 +60,23 @@ class Pool:
             fresh.implausible[inside],
             fresh.delivery[inside],
             fresh.judgement[inside],
+            fresh.doubtful[inside],
         )
 
 
 def _joined(parts: Sequence[RawReadings]) -> Candidates:
     if len(parts) == 1:
         one = parts[0]
-        return Candidates(one.instants, one.values, one.implausible, one.delivery, one.judgement)
+        return Candidates(
+            one.instants, one.values, one.implausible, one.delivery, one.judgement, one.doubtful
+        )
     return Candidates(
         np.concatenate([part.instants for part in parts]),
         np.concatenate([part.values for part in parts]),
         np.concatenate([part.implausible for part in parts]),
         np.concatenate([part.delivery for part in parts]),
         np.concatenate([part.judgement for part in parts]),
+        np.concatenate([part.doubtful for part in parts]),
     )
 
 

@@ -8,9 +8,11 @@ from dataclasses import dataclass, field
 from meterfix.calc.gas.properties import GasLibrary
 from meterfix.errors import MeterfixError
 from meterfix.run import clock
+from meterfix.run.alerts import News
 from meterfix.run.compute import Report
 from meterfix.run.opening import OpenSite
-from meterfix.run.passes import Outcome, PassWork, heartbeat
+from meterfix.run.outcome import Outcome
+from meterfix.run.passes import PassWork, heartbeat
 from meterfix.run.rebuild import missing_segments, rebuild_segment
 from meterfix.store.ledger import DamagedReadings
 
@@ -22,19 +24,28 @@ class Processed:
     passes: int = 0
     files: int = 0
     readings: int = 0
+    """New ones of files that arrived."""
+    judged_again: int = 0
+    """Stored files that the changed site file reads otherwise."""
     days: int = 0
     rejected: list[str] = field(default_factory=list)
     waiting: tuple[str, ...] = ()
     crashes: list[str] = field(default_factory=list)
+    alerts: list[News] = field(default_factory=list)
+    """Alerts opened or closed, in order."""
+    facts: list[str] = field(default_factory=list)
+    """What a start-up found and chained: an older database restored, a pass cut short."""
 
     def add(self, outcome: Outcome) -> None:
         """Count a pass."""
         self.passes += outcome.sequence > 0
         self.files += outcome.files
         self.readings += outcome.readings
+        self.judged_again += outcome.judged_again
         self.days += outcome.days
         self.rejected.extend(outcome.rejected)
         self.waiting = outcome.waiting
+        self.alerts.extend(outcome.alerts)
 
 
 def process(
@@ -99,6 +110,8 @@ def process(
                 if tell is not None:
                     tell(sentence)
                 continue
+            finally:
+                done.facts.extend(work.facts)
             done.add(outcome)
             more = outcome.more
     return done

@@ -11,19 +11,20 @@ from typing import Any
 
 import numpy as np
 
-from meterfix.calc.balance.envelopes import day_balance
 from meterfix.calc.gas.properties import GasLibrary
-from meterfix.calc.totals import day_total, hourly_records
+from meterfix.calc.totals import day_total
 from meterfix.frames import CALCULATION_VERSION, HOURLY_COLUMNS, HourlyRecord, ParsedFile
 from meterfix.intake.site import site_from_text
-from meterfix.run.balances import day_row as balance_day_row
+from meterfix.run.balances import day_rows as balance_day_rows
 from meterfix.run.balances import month_row as balance_month_row
 from meterfix.run.balances import same_balance
+from meterfix.run.compute import Computed, computed, hours_of
 from meterfix.run.days import input_digest, meter_day
 from meterfix.run.figures import (
     FIGURES,
     Row,
     day_row,
+    doubt_text,
     hourly_from,
     hourly_row,
     month_row,
@@ -41,6 +42,10 @@ from meterfix.store.readings import DamagedReadings, encode_segment
 Report = Callable[[str, int, int], None]
 TOLERANCE = 1e-12
 """Of the sum of absolute terms, for figures computed on another machine."""
+TOLERANCE_OF_SLOPES = 1e-9
+"""Likewise of sensitivities and variances: slopes of polynomials and differences lose digits."""
+UNREADABLE = (KeyError, TypeError, ValueError)
+"""What reading a tampered row can raise."""
 FILES_AT_ONCE = 500
 
 
@@ -211,11 +216,17 @@ class _Figures:
     proof: Proof
     tell: Report
     gases: GasLibrary = field(default_factory=GasLibrary)
+    _totals: dict[tuple[str, str, int], Row] = field(default_factory=dict)
+    """Stored gas days by meter, gas day and revision."""
 
     def replay(self) -> None:
         ledger = self.opened.ledger
         revisions = ledger.rows("total_revision", where={"kind": "gas_day"})
         open_days = ledger.rows("open_total", where={"kind": "gas_day"})
+        self._totals = {
+            (row["meter"], row["gas_day"], row.get("revision", 0)): row
+            for row in (*revisions, *open_days)
+        }
         groups: dict[tuple[int, str, str], list[Row]] = {}
         for row in (*revisions, *open_days):
             if row["calculation_version"] != CALCULATION_VERSION:
@@ -258,27 +269,33 @@ class _Figures:
             signals, calendar.start(gas_day) - reach, calendar.end(gas_day) + reach
         )
         days = [meter_day(index, index.meters[row["meter"]], gas_day, chosen) for row in rows]
-        records = hourly_records(days, self.gases)
+        records = hours_of(index, days, self.gases)
         for row, day, record in zip(rows, days, records, strict=True):
             revision = row.get("revision", 0)
             where = f"{row['meter']}, gas day {row['gas_day']}, {_named(revision)}"
-            digest = input_digest(day)
+            digest = input_digest(index, day)
             if row["input_digest"] != digest:
                 self._differs("inputs", where, row["input_digest"], digest)
                 continue
-            again = day_row(index, row["meter"], gas_day, day_total(record), digest)
+            result = computed(index, record, digest)
+            again = day_row(index, row["meter"], gas_day, result.total, result.doubt, digest)
             stored_hours = hours.get((row["meter"], row["gas_day"], revision))
             if stored_hours is None:
                 self._differs("hours", where, "none", "present")
                 continue
-            self._compare(where, row, again, stored_hours, record)
+            self._compare(where, row, again, stored_hours, result)
 
     def _compare(
-        self, where: str, row: Row, again: Row, stored_hours: Row, record: HourlyRecord
+        self, where: str, row: Row, again: Row, stored_hours: Row, result: Computed
     ) -> None:
         self.proof.figures += 1
-        fresh = hourly_row(record)
-        stored = hourly_from(stored_hours)
+        record = result.record
+        fresh = hourly_row(record, result.standard_uncertainty)
+        try:
+            stored = hourly_from(stored_hours)
+        except UNREADABLE as error:
+            self._differs("hours", where, "what cannot be read", str(error))
+            return
         if row["fingerprint"] == fingerprint():
             for name in again:
                 if row[name] != again[name]:
@@ -287,8 +304,9 @@ class _Figures:
             if bytes(stored_hours["statistics"]) != fresh["statistics"]:
                 at = _first_difference(stored.statistics, record.statistics)
                 self._differs("hours", where, *at)
-            else:
-                self._sums(where, row, stored)
+                return
+            self._uncertainties(where, stored_hours, fresh)
+            self._sums(where, row, stored)
             return
         self.proof.elsewhere += 1
         scale = np.nansum(np.abs(record.statistics), axis=0)
@@ -304,6 +322,33 @@ class _Figures:
         if row["flags"] != again["flags"]:
             self.proof.flipped.append(f"{where}: {row['flags']} here {again['flags']}")
         self._sums(where, row, stored)
+        self._slopes(where, stored, record)
+        # what follows from the stored hours by plain arithmetic is the same on every machine
+        index = self.sites[row["site_digest"]]
+        own = computed(index, stored, row["input_digest"])
+        if row["uncertainty"] != (text := doubt_text(own.doubt)):
+            self._differs("uncertainty", where, row["uncertainty"], text)
+        self._uncertainties(where, stored_hours, hourly_row(stored, own.standard_uncertainty))
+
+    def _uncertainties(self, where: str, stored: Row, fresh: Row) -> None:
+        """Compare what a gas day's hours say of their uncertainty, bit for bit."""
+        for name in ("parameters", "sensitivities", "standard_uncertainty"):
+            if stored[name] != fresh[name]:
+                self._differs(name, where, _shortly(stored[name]), _shortly(fresh[name]))
+                return
+
+    def _slopes(self, where: str, stored: HourlyRecord, again: HourlyRecord) -> None:
+        """Compare sensitivities and variances of another machine within the tolerance."""
+        for name in ("sensitivities", "random_variance"):
+            one, other = getattr(stored, name), getattr(again, name)
+            if stored.parameters == again.parameters and one is not None and other is not None:
+                scale = np.maximum(np.nansum(np.abs(other), axis=0), 1e-300)
+                if np.isclose(
+                    one, other, rtol=0.0, atol=scale * TOLERANCE_OF_SLOPES, equal_nan=True
+                ).all():
+                    continue
+            self._differs(name, where, "others", "beyond the tolerance of another machine")
+            return
 
     def _sums(self, where: str, row: Row, stored: HourlyRecord) -> None:
         """Check that the stored day is the exactly rounded sum of its stored hours."""
@@ -345,7 +390,11 @@ class _Figures:
             if not standing:
                 self._differs("days", where, "present", "none")
                 continue
-            again = month_row(index, row["meter"], month, standing)
+            try:
+                again = month_row(index, row["meter"], month, standing)
+            except UNREADABLE as error:
+                self._differs("days", where, "what cannot be read", str(error))
+                continue
             for name in again:
                 if row[name] != again[name]:
                     self._differs(name, where, row[name], again[name])
@@ -374,8 +423,8 @@ class _Figures:
                     if row["kind"] == "gas_day"
                     else self._month_balance(row, days)
                 )
-            except KeyError as error:
-                self._differs("links", where, str(error), "not stored")
+            except UNREADABLE as error:
+                self._differs("links", where, "what is not there, or cannot be read", str(error))
                 continue
             if not same_balance(row, again):
                 name = next(n for n in again if n != "links" and row[n] != again[n])
@@ -384,16 +433,19 @@ class _Figures:
     def _day_balance(self, row: Row, hours: Mapping[tuple[str, str, int], Row]) -> Row:
         index = self.sites[row["site_digest"]]
         envelope = next(e for e in index.site.envelopes if e.name == row["envelope"])
-        day = date.fromisoformat(row["gas_day"])
-        start = index.site.calendar.start(day)
-        records: dict[str, HourlyRecord | None] = {
-            meter: None if revision is None else hourly_from(hours[meter, row["gas_day"], revision])
+        links = [
+            (meter, None if revision is None else (meter, row["gas_day"], revision))
             for meter, revision in json.loads(row["links"])
-        }
-        balance = day_balance(
-            envelope, row["quantity"], records, envelope.tolerance.in_force(start)
+        ]
+        (again,) = balance_day_rows(
+            index,
+            envelope,
+            date.fromisoformat(row["gas_day"]),
+            {meter: None if key is None else hourly_from(hours[key]) for meter, key in links},
+            {meter: None if k is None else self._totals[k]["uncertainty"] for meter, k in links},
+            (row["quantity"],),
         )
-        return balance_day_row(index, balance, day)
+        return again
 
     def _month_balance(self, row: Row, days: Mapping[tuple[str, str, str, int], Row]) -> Row:
         return balance_month_row(
@@ -423,6 +475,13 @@ def _first_difference(one: Any, other: Any) -> tuple[str, str]:
         f"hour {hour + 1} {name} {one[hour, column]!r}",
         f"hour {hour + 1} {name} {other[hour, column]!r}",
     )
+
+
+def _shortly(value: object) -> str:
+    """Return a text as it is, and bytes by their number and digest."""
+    if not isinstance(value, bytes):
+        return str(value)
+    return f"{len(value)} bytes of digest {hashlib.sha256(value).hexdigest()[:16]}"
 
 
 def _named(revision: int) -> str:

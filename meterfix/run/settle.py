@@ -13,14 +13,15 @@ from meterfix.run.figures import (
     BASIS,
     Row,
     day_row,
+    hourly_from,
     hourly_row,
     month_row,
     same_figures,
+    same_hours,
 )
 from meterfix.run.periods import past_deadline
 from meterfix.run.signals import SiteIndex
 from meterfix.store.ledger import Ledger
-from meterfix.store.values import encode_array
 
 
 @dataclass
@@ -72,13 +73,12 @@ class Settling:
 
     def _days(self, computed: Mapping[Key, Computed], out: Settled) -> None:
         for (meter, gas_day), result in sorted(computed.items()):
-            row = day_row(self.index, meter, gas_day, result.total, result.digest)
+            row = day_row(self.index, meter, gas_day, result.total, result.doubt, result.digest)
             before = self.book.days.get((meter, gas_day))
-            hours = hourly_row(result.record)
+            hours = hourly_row(result.record, result.standard_uncertainty)
             if before is not None and before.revision:
                 old = self.book.record(meter, gas_day)
-                same_hours = old is not None and encode_array(old.statistics) == hours["statistics"]
-                if same_hours and same_figures(before.row, row):
+                if old is not None and same_hours(old, hours) and same_figures(before.row, row):
                     continue
             number = self._store_total(row, before.revision if before else 0, out)
             hours_key = {"meter": meter, "gas_day": gas_day.isoformat()}
@@ -95,14 +95,13 @@ class Settling:
             if key in out.changed_days or not self.closes(row["period_end_us"]):
                 continue
             self.book.load([key[1]])
-            record = self.book.record(*key)
-            if record is None:
-                message = f"{key[0]}, gas day {key[1]}: the open day has no hours"
-                raise LookupError(message)
+            hours_key = {"meter": key[0], "gas_day": row["gas_day"]}
+            stored = self.ledger.rows("open_hourly", where=hours_key)[0]
+            del stored["pass_sequence"]
             self._store_total(_plain(row), 0, out)
-            out.add("hourly_record", {**hourly_row(record), "revision": 1})
-            out.drop("open_hourly", {"meter": key[0], "gas_day": row["gas_day"]})
-            self.book.days[key] = Standing(row, 1, record)
+            out.add("hourly_record", {**stored, "revision": 1})
+            out.drop("open_hourly", hours_key)
+            self.book.days[key] = Standing(row, 1, hourly_from(stored))
             out.changed_days.add(key)
 
     def _store_total(self, row: Row, revision: int, out: Settled) -> int:

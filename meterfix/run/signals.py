@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from functools import cached_property
 
 from meterfix.model.site import Meter, MeterTerms, Site
 from meterfix.model.source import Origin, Signal, Source
+from meterfix.model.uncertainty import UncertaintySource
 
 
 @dataclass(frozen=True)
@@ -49,6 +51,45 @@ class SiteIndex:
             for name in self.signals_of(meter):
                 found.setdefault(name, set()).add(meter.name)
         return {name: tuple(sorted(meters)) for name, meters in found.items()}
+
+    @cached_property
+    def components(self) -> dict[str, tuple[str, ...]]:
+        """Components whose mole fractions are uncertain, by gas."""
+        found: dict[str, set[str]] = {}
+        for source in self.site.uncertainty:
+            for part in source.parts:
+                kind, _, component = part.parameter.partition(":")
+                if kind == "fraction":
+                    found.setdefault(part.subject, set()).add(component)
+        return {gas: tuple(sorted(names)) for gas, names in found.items()}
+
+    @cached_property
+    def repeatability(self) -> dict[str, float]:
+        """Standard deviation of one reading by signal, SI, where the site file states it."""
+        return {entry.signal: entry.size for entry in self.site.repeatability}
+
+    @cached_property
+    def _sources_by_parameter(self) -> dict[tuple[str, str], tuple[int, ...]]:
+        found: dict[tuple[str, str], list[int]] = {}
+        for number, source in enumerate(self.site.uncertainty):
+            for part in source.parts:
+                found.setdefault((part.parameter, part.subject), []).append(number)
+        return {parameter: tuple(numbers) for parameter, numbers in found.items()}
+
+    def sources_of(self, parameters: Iterable[tuple[str, str]]) -> tuple[UncertaintySource, ...]:
+        """Return the sources of uncertainty that act on any of the parameters."""
+        by_parameter = self._sources_by_parameter
+        numbers = {n for parameter in parameters for n in by_parameter.get(parameter, ())}
+        return tuple(self.site.uncertainty[n] for n in sorted(numbers))
+
+    def sources_on(self, subjects: Iterable[str]) -> tuple[UncertaintySource, ...]:
+        """Return the sources of uncertainty that act on any of the subjects."""
+        wanted = set(subjects)
+        return tuple(
+            source
+            for source in self.site.uncertainty
+            if any(part.subject in wanted for part in source.parts)
+        )
 
     def signals_of(self, meter: Meter) -> tuple[str, ...]:
         """Return the signals that a meter reads at any time, the barometer included."""

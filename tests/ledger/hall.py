@@ -27,7 +27,8 @@ from meterfix.run.replay import Proof, verify
 
 METERS = ("FT-202", "FT-301", "FT-302", "FT-303")
 OTHERS = ("-101", "-102", "-201", "-203", "FA-4", "PDT-4", "PT-4", "TT-4", "supply",
-          "compressed_air", "envelope.works", "envelope.air")  # fmt: skip
+          "compressed_air", "envelope.works", "envelope.air", "source.historian",
+          "uncertainty.")  # fmt: skip
 WRITTEN = datetime(2026, 10, 5, tzinfo=UTC).timestamp()
 """When all logs were last changed, unless a test says otherwise."""
 EARLY = "2026-10-02T06:00:00Z"
@@ -205,6 +206,25 @@ def figures(site: Path) -> dict[str, Any]:
             found[f"hours {key}"] = {k: v for k, v in row.items() if k not in ARRIVAL_COLUMNS}
         found.update(open_alerts(ledger))
         return found
+
+
+def doubted(found: Mapping[str, Any]) -> int:
+    """Return how many totals and balances of `figures` have an uncertainty; check what hours hold.
+
+    A comparison of two ledgers that say nothing of uncertainty would prove nothing of it.
+    """
+    for name, row in found.items():
+        if name.startswith("hours"):
+            parameters = json.loads(row["parameters"])
+            assert len(parameters) > 20, name
+            assert len(row["sensitivities"]) == row["hours"] * (len(parameters) + 1) * 3 * 8
+            assert len(row["standard_uncertainty"]) == row["hours"] * 3 * 8
+    rows = [row for name, row in found.items() if name.startswith(("total", "balance"))]
+    return sum(
+        row.get("mass_expanded_uncertainty_kg", row.get("expanded_uncertainty")) is not None
+        and len(json.loads(row["uncertainty"])["contributions"]) > 10
+        for row in rows
+    )
 
 
 def _standing(ledger: Any, name: str, key: tuple[str, ...]) -> dict[Any, dict[str, Any]]:

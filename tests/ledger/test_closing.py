@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import re
 import shutil
 from pathlib import Path
 
@@ -181,7 +182,7 @@ def closed(closed_days, tmp_path) -> Path:
 BORE = """
 [[meter.FT-301.change]]
 since = "2026-10-03T12:00:00+02:00"
-orifice = { bore = "53.80 mm" }
+nozzle = { bore = "42.50 mm" }
 
 """
 
@@ -192,7 +193,7 @@ def with_change(text: str, change: str) -> str:
 
 
 def test_bore_from_an_instant_on_revises_only_the_days_it_touches(hall, closed):
-    """A new plate on the third day: a revision of that day, its month and its balance alone."""
+    """A new nozzle on the third day: a revision of that day, its month and its balance alone."""
     text, before = closed.read_text(), hall.figures(closed)
     closed.write_text(with_change(text, BORE))
     hall.run(closed, "2026-11-02T00:00:00Z")
@@ -220,6 +221,78 @@ def test_bore_from_an_instant_on_revises_only_the_days_it_touches(hall, closed):
     hall.run(closed, "2026-11-02T01:00:00Z")
     assert stages(hall, closed)["FT-301", "gas_day"] == 3
     assert len(hall.rows(closed, "site_version")) == 2
+    assert hall.differences(before, hall.figures(closed)) == []
+    assert not hall.prove(closed).findings
+
+
+def same_but(one: bytes | str | None, other: bytes | str | None, name: str, *changes: str) -> None:
+    """Check that a column of two revisions is the same, or another one where it is to change."""
+    assert (one != other) == (name in changes), name
+
+
+@pytest.mark.parametrize(
+    ("stated", "meters"),
+    [
+        (r'\[signal\.PDT-301\].*?"zero", size = "([\d.]+) %', {"FT-301"}),
+        # FT-303 is a classical Venturi tube, whose C does not ask the Reynolds number
+        (
+            r'\[gas\.natural_gas\].*?viscosity_uncertainty = \{ size = "([\d.]+) %',
+            {"FT-202", "FT-301", "FT-302"},
+        ),
+    ],
+    ids=["of one transmitter", "of a gas"],
+)
+def test_another_stated_uncertainty_revises_what_it_touches(stated, meters, hall, closed):
+    """Specified worse: new revisions of the meters that it touches; no figure moves a bit."""
+    text, before = closed.read_text(), hall.figures(closed)
+    found = re.search(stated, text, re.DOTALL)
+    worse = str(2.0 * float(found[1]))
+    closed.write_text(text[: found.start(1)] + worse + text[found.end(1) :])
+    hall.run(closed, "2026-11-02T00:00:00Z")
+    expected = {
+        (meter, kind): 2 if meter in meters else 1
+        for meter in hall.METERS
+        for kind in ("gas_day", "month")
+    }
+    assert stages(hall, closed) == expected
+    revised = [row for row in hall.rows(closed, "total_revision") if row["revision"] == 2]
+    assert {row["reason"] for row in revised} == {"the site file changed"}
+    assert {row["judgement"] for row in hall.rows(closed, "fate")} == {1}
+    first = {
+        (row["meter"], row["kind"], row["gas_day"]): row
+        for row in hall.rows(closed, "total_revision")
+        if row["revision"] == 1
+    }
+    # a day without flow has nothing to doubt
+    doubtful = {key for key, row in first.items() if key[0] in meters and row["mass_kg"] > 0}
+    assert {(row["meter"], row["kind"], row["gas_day"]) for row in revised} == doubtful
+    assert len(revised) == len(doubtful) > 3 * len(meters)
+    for row in revised:
+        old = first[row["meter"], row["kind"], row["gas_day"]]
+        for name in ("mass_kg", "line_volume_m3", "base_volume_m3", "energy_J", "flags", "missing",
+                     "measured_time_s", "uncertainty"):  # fmt: skip
+            same_but(old[name], row[name], name, "uncertainty")
+        assert row["mass_expanded_uncertainty_kg"] > old["mass_expanded_uncertainty_kg"]
+    for meter in meters:
+        one, two = hall.rows(closed, "hourly_record", meter=meter, gas_day="2026-10-02")
+        for name in ("statistics", "sensitivities", "parameters", "standard_uncertainty"):
+            same_but(one[name], two[name], name, "standard_uncertainty")
+    # the balance stands at the same imbalance, and knows less of it
+    latest = {
+        (row["kind"], row["quantity"], row["gas_day"], row["revision"]): row
+        for row in hall.rows(closed, "balance_revision")
+    }
+    assert {key[3] for key in latest} == {1, 2}
+    for (kind, quantity, day, revision), row in latest.items():
+        if revision == 2:
+            old = latest[kind, quantity, day, 1]
+            assert row["revision_reason"] == "the site file changed"
+            assert row["imbalance"] == old["imbalance"]
+            assert row["uncertainty"] != old["uncertainty"]
+    assert not hall.prove(closed).findings
+    # and back: what was stated first gives the first figures
+    closed.write_text(text)
+    hall.run(closed, "2026-11-02T01:00:00Z")
     assert hall.differences(before, hall.figures(closed)) == []
     assert not hall.prove(closed).findings
 

@@ -58,6 +58,7 @@ def at_once(hall, logs, tmp_path_factory):
     totals = [row for name, row in found.items() if name.startswith("total")]
     assert len(totals) == 4 * len(hall.METERS)
     assert sum(row["mass_kg"] > 0 for row in totals) > 3 * len(hall.METERS)
+    assert hall.doubted(found) > 4 * len(hall.METERS)
     return found
 
 
@@ -85,6 +86,25 @@ def test_three_slices(order, now, hall, site, slices, at_once):
         assert max(revised) > 1
     assert hall.differences(at_once, hall.figures(site)) == []
     assert not hall.prove(site).findings
+
+
+def test_meter_days_computed_one_by_one(hall, site, logs, at_once, monkeypatch):
+    """A meter-day computed alone has the bits of one among many, sensitivities included."""
+    from meterfix.calc.gas.properties import GasLibrary
+    from meterfix.run import compute
+
+    done, many = [], compute.hours_of
+
+    def one_by_one(index, days, _gases):
+        records = [record for day in days for record in many(index, [day], GasLibrary())]
+        done.extend(records)
+        return records
+
+    monkeypatch.setattr(compute, "hours_of", one_by_one)
+    hall.put_all(site, logs)
+    hall.run(site, AFTER)
+    assert len(done) == 3 * len(hall.METERS)
+    assert hall.differences(at_once, hall.figures(site)) == []
 
 
 @pytest.mark.parametrize("now", [BEFORE, AFTER], ids=["open between", "closed between"])
@@ -204,9 +224,20 @@ def test_overlapping_files_that_disagree(hall, tmp_path, logs, disputed_rows, un
         assert len({row["instant_us"] for row in conflicts}) == 10
         assert {row["chosen"] for row in conflicts} == {123_400.0}
         assert all("disputed" in row["rule"] for row in conflicts)
-        assert hall.events(site, "disputed hour") == [
-            ("opened", {"hours": ["2026-10-02T10:00:00+00:00"], "readings": 10})
-        ]
+        ((state, evidence),) = hall.events(site, "disputed hour")
+        assert state == "opened"
+        told = evidence.pop("first_conflicts")
+        assert evidence == {
+            "hours": ["2026-10-02T10:00:00Z"], "readings": 10, "conflicts": 10,
+        }  # fmt: skip
+        assert [one["signal"] for one in told] == ["PT-301"] * 5
+        assert told[0]["instant"].startswith("2026-10-02T10:3")
+        assert told[0]["instant"].endswith("Z")
+        for one in told:
+            low, high = one["values"]
+            assert low == {"value_SI": 123_400.0, "files": ["works_pt: FT-301_other.csv"]}
+            assert high["value_SI"] > 123_400.0
+            assert high["files"] == ["works_pt: FT-301_all.csv"]
         assert not hall.prove(site).findings
         found.append(hall.figures(site))
     assert hall.differences(*found) == []
@@ -233,6 +264,27 @@ def test_disagreement_that_a_resend_settles(hall, site, logs, disputed_rows, at_
     assert not hall.prove(site).findings
 
 
+def test_the_other_file_sent_as_a_copy_settles_too(hall, site, logs, disputed_rows, at_once):
+    """Known bytes count under a name that last held other ones: A and B both say what A said."""
+    right = next(x for x in logs if x.source == "works_pt" and x.meter == "FT-301")
+    hall.put_all(site, logs)
+    path = disputed_rows.put(site, "other")
+    hall.run(site, AFTER)
+    hall.lay(path, right.content, changed=hall.WRITTEN + 60)
+    hall.run(site, AFTER)
+    assert hall.differences(at_once, hall.figures(site)) == []
+    assert [state for state, _ in hall.events(site, "disputed hour")] == ["opened", "closed"]
+    assert not hall.prove(site).findings
+    # and sent a third time with the wrong bytes, the wrong ones count again
+    hall.lay(path, disputed_rows.content, changed=hall.WRITTEN + 120)
+    hall.run(site, AFTER)
+    assert [row["version"] for row in hall.rows(site, "delivery", name=path.name)] == [1, 2, 3]
+    assert [state for state, _ in hall.events(site, "disputed hour")] == [
+        "opened", "closed", "updated",
+    ]  # fmt: skip
+    assert not hall.prove(site).findings
+
+
 def test_same_name_with_other_bytes(hall, site, logs, at_once):
     """A new version: the later wins without dispute; rows absent from it are kept and reported."""
     hall.put_all(site, logs)
@@ -246,7 +298,7 @@ def test_same_name_with_other_bytes(hall, site, logs, at_once):
     assert versions[1]["replaces"] == versions[0]["sequence"]
     fate = hall.rows(site, "fate", delivery_sequence=versions[1]["sequence"])[0]
     absent = 2 * (len(log.rows) - len(resent.rows))
-    assert f"{absent} reading(s)" in fate["warning"]
+    assert f"{absent} readings" in fate["warning"]
     assert "absent" in fate["warning"]
     conflicts = hall.rows(site, "conflict", signal="PT-301")
     assert len(conflicts) == 10

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
+import re
 import shutil
 import sqlite3
+import struct
 from collections.abc import Callable
 from contextlib import closing
 from pathlib import Path
@@ -83,8 +85,25 @@ def one_byte(table: str, column: str) -> Callable[[sqlite3.Connection], None]:
     def change(database: sqlite3.Connection) -> None:
         at, blob = database.execute(f"SELECT rowid, {column} FROM {table} LIMIT 1").fetchone()
         changed = bytearray(blob)
-        changed[8 * 11 * 3 + 1] ^= 1
+        changed[8 * 11 * 3 + 1] ^= 1  # of a number that no array of hours leaves 0
         database.execute(f"UPDATE {table} SET {column} = ? WHERE rowid = ?", (bytes(changed), at))
+
+    return change
+
+
+def next_digit(table: str) -> Callable[[sqlite3.Connection], None]:
+    """Return a change of the last digit of the first contribution that a row holds."""
+
+    def change(database: sqlite3.Connection) -> None:
+        at, text = database.execute(
+            f"SELECT rowid, uncertainty FROM {table} WHERE uncertainty LIKE '%.%' LIMIT 1"
+        ).fetchone()
+        end = re.search(r"\[-?\d+\.\d+", text).end()
+        digit = str((int(text[end - 1]) + 1) % 10)
+        database.execute(
+            f"UPDATE {table} SET uncertainty = ? WHERE rowid = ?",
+            (text[: end - 1] + digit + text[end:], at),
+        )
 
     return change
 
@@ -153,6 +172,120 @@ def test_changed_database_is_found(what, hall, copy_of, good):
     code, first = verified(site)
     assert code == 1
     assert named in first, first
+
+
+REPLAYED = {
+    "sensitivities": (
+        one_byte("hourly_record", "sensitivities"), "hourly_record of pass", ", gas day"
+    ),
+    "standard_uncertainty": (
+        one_byte("hourly_record", "standard_uncertainty"), "hourly_record of pass", ", gas day"
+    ),
+    "uncertainty": (next_digit("total_revision"), "total_revision of pass", ", gas day"),
+    "energy_expanded_uncertainty_J": (
+        next_bit("total_revision", "energy_expanded_uncertainty_J"),
+        "total_revision of pass", ", gas day",
+    ),
+    "uncertainty of a month": (next_digit("open_total"), "", ", month"),
+    "uncertainty of a balance": (
+        next_digit("balance_revision"), "balance_revision of pass", "envelope hall"
+    ),
+    "expanded_uncertainty": (
+        next_bit("balance_revision", "expanded_uncertainty"),
+        "balance_revision of pass", "envelope hall",
+    ),
+    "uncertainty of an open balance": (next_digit("open_balance"), "", "envelope hall"),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("what", REPLAYED)
+def test_changed_uncertainty_is_found_and_replayed(what, hall, copy_of, good):
+    """The digests of a closed row find it first; so does the replay, which names the figure."""
+    change, digested, where = REPLAYED[what]
+    site = copy_of(good)
+    tamper(site, change)
+    findings = hall.prove(site).findings
+    if digested:
+        assert (findings[0].check, findings[0].where[: len(digested)]) == ("rows", digested)
+    first = next(finding for finding in findings if finding.check == "figures")
+    assert first.message.startswith(f"{what.partition(' of ')[0]}: stored ")
+    assert where in first.where
+
+
+UNREADABLE = {
+    "hourly_record": ("parameters = '[['", "sensitivities = x'00'",
+                      """parameters = '[["bore", "x"]]'"""),
+    "total_revision": ("uncertainty = '{'", "uncertainty = '[1]'", "uncertainty = '{}'"),
+    "balance_revision": ("uncertainty = '{}'", "uncertainty = '{'", "uncertainty = '[1]'"),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("number", range(3))
+def test_what_cannot_be_read_is_a_finding(number, copy_of, good):
+    """Uncertainties that were made unreadable are named; verify does not break off."""
+    site = copy_of(good)
+    for table, changes in UNREADABLE.items():
+        tamper(site, lambda db, t=table, c=changes[number]: db.execute(f"UPDATE {t} SET {c}"))
+    code, first = verified(site)
+    assert code == 1
+    assert first.startswith("rows: ")
+
+
+# --- a ledger from another machine ---------------------------------------------------------------
+
+
+@pytest.fixture(scope="module")
+def elsewhere(hall, flawed_day, tmp_path_factory) -> Path:
+    """Make a ledger of open days that says that another machine computed it."""
+    folder = tmp_path_factory.mktemp("elsewhere") / "site"
+    shutil.copytree(flawed_day.parent, folder)
+    site = folder / flawed_day.name
+    hall.run(site, hall.EARLY)
+    for table in ("open_total", "open_balance"):
+        tamper(site, lambda db, t=table: db.execute(f"UPDATE {t} SET fingerprint = 'another'"))
+    return site
+
+
+def moved(column: str, relative: float) -> Callable[[sqlite3.Connection], None]:
+    """Return a relative change of the largest value that the hours hold in a column."""
+
+    def change(database: sqlite3.Connection) -> None:
+        at, blob = database.execute(f"SELECT rowid, {column} FROM open_hourly LIMIT 1").fetchone()
+        values = list(struct.unpack(f"<{len(blob) // 8}d", blob))
+        largest = max(range(len(values)), key=lambda n: abs(values[n]))
+        values[largest] *= 1.0 + relative
+        changed = struct.pack(f"<{len(values)}d", *values)
+        database.execute(f"UPDATE open_hourly SET {column} = ? WHERE rowid = ?", (changed, at))
+
+    return change
+
+
+def test_ledger_of_another_machine_is_proved_within_a_tolerance(hall, elsewhere):
+    """Figures of another fingerprint are replayed, and sums over stored hours to the bit."""
+    proof = hall.prove(elsewhere)
+    assert not proof.findings
+    assert proof.elsewhere == len(hall.METERS)
+
+
+@pytest.mark.parametrize(
+    ("change", "named"),
+    [
+        (moved("sensitivities", 1e-6), ("sensitivities: ", "random_variance: ")),
+        (moved("sensitivities", 1e-13), ("uncertainty: ",)),
+        (moved("standard_uncertainty", 1e-13), ("standard_uncertainty: ",)),
+        (next_digit("open_total"), ("uncertainty: ",)),
+    ],
+    ids=["beyond the tolerance", "within it", "of an hour", "of a day"],
+)
+def test_changed_uncertainty_of_another_machine_is_found(change, named, hall, copy_of, elsewhere):
+    """What no longer follows from the stored hours is found, however small."""
+    site = copy_of(elsewhere)
+    tamper(site, change)
+    found = hall.prove(site).findings
+    assert any(finding.message.startswith(named) for finding in found), found
+
+
+# --- the archive ---------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("part", [0.1, 0.5, 0.999])

@@ -1,5 +1,7 @@
 """Which of several readings counts does not depend on the order in which they came."""
 
+from dataclasses import replace
+
 import numpy as np
 from hypothesis import given
 from hypothesis import strategies as st
@@ -22,6 +24,7 @@ def candidates(rows):
         np.zeros(len(rows), dtype=bool),
         np.array(deliveries, dtype=np.int64),
         np.array(judgements, dtype=np.int64),
+        np.zeros(len(rows), dtype=bool),
     )
 
 
@@ -63,6 +66,34 @@ def test_replaced_value_no_longer_disputes():
     assert chosen(rows) == [(10, 6.0, False)]
 
 
+@given(st.randoms(use_true_random=False))
+def test_of_equal_values_one_of_good_quality_stands(random):
+    """A doubtful reading and a good one of the same value, in any order, give a good one.
+
+    Where the good one says something else, both stay in dispute as ever, and the lowest stands.
+    """
+    rows = [
+        (10, 5.0, 3, 1, True),
+        (10, 5.0, 2, 1, False),
+        (20, 1.0, 3, 1, True),
+        (20, 2.0, 2, 1, False),
+    ]
+    random.shuffle(rows)
+    found = candidates([row[:4] for row in rows])
+    found = replace(found, doubtful=np.array([row[4] for row in rows]))
+    result = choose(found, Ranks.of(RANKS))
+    assert result.values.tolist() == [5.0, 1.0]
+    assert result.doubtful.tolist() == [False, True]
+    assert result.disputed.tolist() == [False, True]
+
+
+def test_a_later_version_that_doubts_a_value_is_believed():
+    """Version 2 of a file calls the value of version 1 doubtful: the reading is doubtful."""
+    found = candidates([(10, 5.0, 1, 1), (10, 5.0, 2, 1)])
+    found = replace(found, doubtful=np.array([False, True]))
+    assert choose(found, Ranks.of(RANKS)).doubtful.tolist() == [True]
+
+
 def test_superseded_judgement_and_unknown_delivery_do_not_count():
     """Only the judgement that counts gives readings; a delivery without a rank gives none."""
     assert chosen([(10, 1.0, 4, 1), (20, 2.0, 4, 2), (30, 3.0, 9, 1)]) == [(20, 2.0, False)]
@@ -70,7 +101,8 @@ def test_superseded_judgement_and_unknown_delivery_do_not_count():
 
 def test_nothing_known_gives_nothing():
     """Without deliveries there are no readings."""
-    empty = Candidates(*(np.zeros(0, dtype=t) for t in (np.int64, float, bool, np.int64, np.int64)))
+    types = (np.int64, float, bool, np.int64, np.int64, bool)
+    empty = Candidates(*(np.zeros(0, dtype=t) for t in types))
     assert len(choose(empty, Ranks.of({})).instants) == 0
 
 
