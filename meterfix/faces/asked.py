@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from meterfix.model.calendar import from_microseconds
+from meterfix.model.wording import utc_text
 
 Row = dict[str, Any]
 """What is shown under the names of `columns.ALL`; tables also use a few names beyond them."""
@@ -38,4 +38,4 @@ class Asked:
 
 def time_text(instant: int) -> str:
     """Return an instant [UTC us] as ISO 8601 text in UTC."""
-    return from_microseconds(instant).isoformat().replace("+00:00", "Z")
+    return utc_text(instant)

@@ -26,6 +26,7 @@ TOTALS = (
     "status",
     "revision",
     "combustion_reference_temperature_degC",
+    "month",
 )
 BALANCES = (
     "envelope",
@@ -51,6 +52,7 @@ BALANCES = (
     "base_temperature_degC",
     "calorific_value_kind",
     "combustion_reference_temperature_degC",
+    "month",
 )
 ALERTS = (
     "kind",
@@ -98,7 +100,37 @@ PASSES = (
     "row_hash",
 )
 
+BUDGET = (
+    "meter",
+    "period_start",
+    "period_end",
+    "gas_day",
+    "source_of_uncertainty",
+    "mass_contribution_kg",
+    "base_volume_contribution_m3",
+    "energy_contribution_MJ",
+    "base_volume_contribution_percent",
+    "variance_fraction",
+    "reason",
+    "status",
+    "revision",
+    "base_pressure_kPa",
+    "base_temperature_degC",
+    "calorific_value_kind",
+    "combustion_reference_temperature_degC",
+    "month",
+)
+
 BRIEF = {
+    "budget": (
+        "meter",
+        "month",
+        "gas_day",
+        "source_of_uncertainty",
+        "base_volume_contribution_m3",
+        "base_volume_contribution_percent",
+        "variance_fraction",
+    ),
     "totals": (
         "meter",
         "month",
@@ -107,6 +139,7 @@ BRIEF = {
         "base_volume_m3",
         "mass_kg",
         "energy_MJ",
+        "expanded_uncertainty_percent",
         "measured_fraction",
         "status",
         "revision",
@@ -121,17 +154,19 @@ BRIEF = {
         "out",
         "vented",
         "imbalance",
+        "expanded_uncertainty",
         "tolerance",
         "unit",
+        "significant",
         "beyond_tolerance",
         "measured_fraction",
-        "status",
         "revision",
     ),
     "alerts": ("kind", "since", "until", "severity", "message"),
     "files": (
         "source",
         "name",
+        "version",
         "verdict",
         "lines_read",
         "lines_used",
@@ -164,6 +199,13 @@ HEADINGS = {
     "mass_kg": "mass\nkg",
     "energy_MJ": "energy\nMJ",
     "measured_fraction": "measured",
+    "expanded_uncertainty_percent": "\u00b1 %\nk=2",
+    "expanded_uncertainty": "\u00b1\nk=2",
+    "significant": "signif-\nicant",
+    "source_of_uncertainty": "source of uncertainty",
+    "base_volume_contribution_m3": "base volume\nm3 (k=1)",
+    "base_volume_contribution_percent": "base volume\n% (k=1)",
+    "variance_fraction": "share of\nvariance",
     "imbalance": "imbal-\nance",
     "tolerance": "toler-\nance",
     "beyond_tolerance": "beyond\ntolerance",
@@ -173,6 +215,7 @@ HEADINGS = {
     "lines_duplicate": "dupli-\ncate",
     "lines_skipped": "skipped",
     "sequence": "no.",
+    "version": "ver.",
     "revision": "rev",
     "gas_day": "gas day",
     "period_start": "from (UTC)",
@@ -195,12 +238,15 @@ SHORT_FLAGS = {
     "disputed_reading": "disputed",
     "carried_value": "carried",
     "mean_of_differential_pressure": "mean dp",
+    "doubtful_quality": "doubtful",
+    "calorific_value_outside_limits": "ISO 6976",
 }
 """What a table calls a flag of `frames.FLAGS`; CSV and JSON give its whole name."""
 
 ALL = {
     "totals": TOTALS,
     "balances": BALANCES,
+    "budget": BUDGET,
     "alerts": ALERTS,
     "files": FILES,
     "passes": PASSES,

@@ -13,8 +13,10 @@ import click
 
 from meterfix import __version__
 from meterfix.errors import MeterfixError, SiteFileError
+from meterfix.model.wording import counted, utc_text
 
 if TYPE_CHECKING:
+    from meterfix.model.site import Site
     from meterfix.run.process import Processed
 
 DONE, FAILED, UNUSABLE = 0, 1, 2
@@ -102,10 +104,12 @@ def check(site: Path, form: str, *, schema: bool) -> None:
         return
     from meterfix.run.gas_check import check_gases
 
+    notes: list[str] = []
     with _errors():
         try:
             found = read_site(site)
             check_gases(found, site)
+            notes = [*found.notes, *_missing_folders(found, site)]
         except SiteFileError as error:
             if form == "text":
                 raise
@@ -131,22 +135,41 @@ def check(site: Path, form: str, *, schema: bool) -> None:
                     "mistakes": [],
                     "digest": found.digest,
                     **counts,
-                    "notes": list(found.notes),
+                    "notes": notes,
                     "sqlite": sqlite3.sqlite_version,
                 },
                 indent=1,
             )
         )
         return
-    click.echo(f"{site}: usable; " + ", ".join(f"{n} {what}" for what, n in counts.items()))
-    for note in found.notes:
+    told = [
+        counted(n, "gas" if what == "gases" else what.removesuffix("s"), what)
+        for what, n in counts.items()
+    ]
+    click.echo(f"{site}: usable; " + ", ".join(told))
+    for note in notes:
         click.echo(f"  {note}")
     click.echo(f"  SQLite {sqlite3.sqlite_version}")
 
 
+def _missing_folders(found: Site, site: Path) -> list[str]:
+    """Return a note for every source whose folder is not there (yet)."""
+    folders = [(source.name, site.parent / source.folder) for source in found.sources]
+    return [
+        f"source {name}: there is no folder {folder}; its logs are waited for"
+        for name, folder in folders
+        if not folder.is_dir()
+    ]
+
+
 @main.command()
 @SITE
-@click.option("--now", type=Instant(), help="The time to take for the present; default: the clock.")
+@click.option(
+    "--now",
+    type=Instant(),
+    help="The time to take for the present; default: the clock. What closes at a time ahead of "
+    "the clock stays closed, and nothing else closes until the clock gets there.",
+)
 @click.option("--quiet", is_flag=True, help="No progress.")
 @click.option(
     "--format", "form", type=click.Choice(["text", "json"]), default="text", show_default=True
@@ -160,8 +183,11 @@ def process(site: Path, now: Any, form: str, *, quiet: bool) -> None:
         from meterfix.run.opening import open_site
         from meterfix.run.process import process as run
 
+        instant = _instant(now, site)
+        if instant is not None:
+            _warn_if_ahead(instant)
         with open_site(site) as opened, progress(quiet=quiet) as report:
-            done = run(opened, _instant(now, site), report, lambda text: click.echo(text, err=True))
+            done = run(opened, instant, report, lambda text: click.echo(text, err=True))
         say_processed(done, form)
         if done.rejected or done.crashes or any(": refused: " in w for w in done.waiting):
             sys.exit(FAILED)
@@ -169,6 +195,8 @@ def process(site: Path, now: Any, form: str, *, quiet: bool) -> None:
 
 def say_processed(done: Processed, form: str = "text") -> None:
     """Print what the passes did."""
+    from meterfix.run.outcome import judged_again_text
+
     if form == "json":
         click.echo(
             json.dumps(
@@ -176,22 +204,43 @@ def say_processed(done: Processed, form: str = "text") -> None:
                     "passes": done.passes,
                     "files": done.files,
                     "readings": done.readings,
+                    "files_judged_again": done.judged_again,
                     "meter_days": done.days,
                     "rejected": done.rejected,
                     "waiting": list(done.waiting),
                     "crashes": done.crashes,
+                    "alerts": [
+                        {
+                            "state": news.state,
+                            "kind": news.kind,
+                            "subject": news.subject,
+                            "since": utc_text(news.since),
+                            "message": news.message,
+                        }
+                        for news in done.alerts
+                    ],
+                    "recorded": done.facts,
                 },
                 indent=1,
             )
         )
         return
     if done.passes:
+        parts = [
+            counted(done.files, "file"),
+            counted(done.readings, "new reading"),
+            judged_again_text(done.judged_again),
+            f"{counted(done.days, 'meter-day')} computed",
+        ]
         click.echo(
-            f"{done.passes} pass(es): {done.files} file(s), {done.readings} new readings, "
-            f"{done.days} meter-day(s) computed"
+            f"{counted(done.passes, 'pass', 'passes')}: {', '.join(part for part in parts if part)}"
         )
     else:
         click.echo("nothing new")
+    for text in done.facts:
+        click.echo(f"recorded: {text}", err=True)
+    for news in done.alerts:
+        click.echo(f"alert {news.state}: {news.kind}, {news.subject}: {news.message}", err=True)
     for text in done.rejected:
         click.echo(f"rejected: {text}", err=True)
     for text in done.waiting:
@@ -199,7 +248,9 @@ def say_processed(done: Processed, form: str = "text") -> None:
 
 
 @main.command()
-@click.argument("what", type=click.Choice(["totals", "balances", "alerts", "files", "passes"]))
+@click.argument(
+    "what", type=click.Choice(["totals", "balances", "budget", "alerts", "files", "passes"])
+)
 @SITE
 @click.option(
     "--by",
@@ -228,8 +279,10 @@ def show(
 
     Example: meterfix show totals --by hour --meter FT-101 --from 2026-10-25 --format csv
     """
-    if by is not None and what not in {"totals", "balances"}:
-        raise click.UsageError(f"--by goes with totals and balances, not with {what}")
+    if by is not None and what not in {"totals", "balances", "budget"}:
+        raise click.UsageError(f"--by goes with totals, balances and budget, not with {what}")
+    if by == "hour" and what == "budget":
+        raise click.UsageError("a budget is kept per gas day and month, not per hour")
     if meter is not None and what == "passes":
         raise click.UsageError("--meter does not go with passes")
     with _errors():
@@ -238,8 +291,9 @@ def show(
         from meterfix.run.opening import open_site
 
         with open_site(site, read_only=True) as opened:
-            if meter is not None and meter not in opened.index.meters:
-                known = ", ".join(sorted(opened.index.meters))
+            meters = {*opened.index.meters, *listing.meters_with_totals(opened)}
+            if meter is not None and meter not in meters:
+                known = ", ".join(sorted(meters))
                 raise click.UsageError(f"no meter {meter!r}; there are {known}")
             asked = Asked(by or "gas-day", meter, _edge(start, opened), _edge(end, opened))
             listing.listing(what, opened, asked, form)
@@ -295,17 +349,18 @@ def _say_proof(proof: Any) -> None:
         click.echo(f"and {len(proof.findings) - 20} more", err=True)
     verdict = "differences found" if proof.findings else "proved"
     click.echo(
-        f"{verdict}: {proof.passes} pass(es), {proof.files} file(s), {proof.figures} total(s), "
-        f"{proof.balances} balance(s) replayed"
+        f"{verdict}: {counted(proof.passes, 'pass', 'passes')}, {counted(proof.files, 'file')}, "
+        f"{counted(proof.figures, 'total')}, {counted(proof.balances, 'balance')} replayed"
     )
     if proof.elsewhere:
         click.echo(
-            f"{proof.elsewhere} total(s) were computed on another machine and agree within 1e-12"
+            f"{counted(proof.elsewhere, 'total')} computed on another machine: the same within "
+            "1e-12"
         )
     if proof.not_replayable:
         click.echo(
-            f"{proof.not_replayable} figure(s) of another calculation version: proved by digest, "
-            "not replayable here"
+            f"{counted(proof.not_replayable, 'figure')} of another calculation version: proved by "
+            "digest, not replayable here"
         )
     for text in proof.flipped:
         click.echo(f"flags differ on this machine: {text}")
@@ -362,6 +417,28 @@ def _instant(value: Any, site: Path) -> int | None:
     if not isinstance(value, datetime):
         raise click.UsageError(f"--now for {site} needs a time with its offset, not only a date")
     return to_microseconds(value)
+
+
+AHEAD = 5 * 60 * 1_000_000
+"""How far a --now may be ahead of the clock before that is said [us]."""
+
+
+def _warn_if_ahead(instant: int) -> None:
+    """Say what follows from a --now that is ahead of this machine's clock."""
+    from meterfix.model.calendar import DAY
+    from meterfix.run import clock
+
+    ahead = instant - clock.now()
+    if ahead <= AHEAD:
+        return
+    far = counted(round(ahead / DAY), "day")
+    if ahead < DAY:
+        far = counted(round(ahead / (60 * 1_000_000)), "minute")
+    click.echo(
+        f"--now is {far} ahead of this machine's clock: what closes now stays closed, and nothing "
+        "else closes until the clock gets there",
+        err=True,
+    )
 
 
 def _edge(value: Any, opened: Any) -> int | None:

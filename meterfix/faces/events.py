@@ -8,6 +8,7 @@ from typing import Any
 
 from meterfix.faces.asked import Asked, Row, time_text
 from meterfix.run.opening import OpenSite
+from meterfix.run.outcome import fact_text, judged_again_text
 
 COUNTS = ("read", "used", "set_aside", "duplicate", "skipped")
 
@@ -113,6 +114,8 @@ def by_source(rows: list[Row]) -> list[Row]:
 def _feeding(opened: OpenSite, meter: str) -> set[tuple[str, str]]:
     """Return source and binding of what a meter's signals are read from."""
     index = opened.index
+    if meter not in index.meters:
+        return set()  # the site file in force no longer says what feeds it
     return {
         (origin.source, origin.binding)
         for name in index.signals_of(index.meters[meter])
@@ -177,4 +180,7 @@ def passes(opened: OpenSite, asked: Asked) -> list[Row]:
 
 
 def _facts(note: str) -> str:
-    return "; ".join(str(fact.get("fact")) for fact in json.loads(note).get("facts", []))
+    told = json.loads(note)
+    parts = [fact_text(fact) for fact in told.get("facts", [])]
+    parts.append(judged_again_text(told.get("judged_again", 0)))
+    return "; ".join(part for part in parts if part)

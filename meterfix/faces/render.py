@@ -23,6 +23,10 @@ DIGITS = 6
 """Significant digits of a figure in a table; CSV and JSON carry all of them."""
 _LONG = re.compile(r"(?<![\w.-])[0-9]+(?:\.[0-9]+)?(?:e[+-]?[0-9]+)?(?= (?:s|%)(?!\w))")
 """A number of seconds or percent inside a sentence; never a part of a name."""
+WRAPPED = frozenset(
+    {"flags", "message", "name", "source", "kind", "note", "envelope", "source_of_uncertainty"}
+)
+"""Columns of text that may take several lines."""
 LONGEST_TEXT = 60
 """Characters of a set-aside text that a table shows."""
 
@@ -57,7 +61,7 @@ def table(what: str, rows: Sequence[Row], by: str = "") -> Table:
             HEADINGS.get(name, name.replace("_", " ")),
             justify="right" if number else "left",
             overflow="fold",
-            no_wrap=name not in {"flags", "message", "name", "source", "kind", "note", "envelope"},
+            no_wrap=name not in WRAPPED,
         )
     for row in rows:
         grid.add_row(*(Text(_shown(name, row)) for name in shown))
@@ -127,6 +131,15 @@ def gaps(rows: Sequence[Row], by: str) -> list[str]:
     return list(notes)
 
 
+def doubts(rows: Sequence[Row]) -> list[str]:
+    """Return why figures of a table have no uncertainty, once for each meter or envelope."""
+    notes: dict[str, None] = {}
+    for row in rows:
+        subject = row.get("meter") or row.get("subject") or row["envelope"]
+        notes.update(dict.fromkeys(f"{subject}: {text}" for text in row["unstated"]))
+    return list(notes)
+
+
 def shortened(text: str) -> str:
     """Return a sentence with its times and percentages cut to two decimals, never rounded up."""
     return _LONG.sub(lambda found: _cut(float(found[0])), text)
@@ -169,7 +182,7 @@ def console_for(width: int | None = None, *, error: bool = False) -> Console:
 
 
 def _says_something(name: str, rows: Sequence[Row]) -> bool:
-    silent = {None, "", 0.0} if name == "vented" else {None, ""}
+    silent = {None, "", {"vented": 0.0, "version": 1}.get(name)}
     return any(row.get(name) not in silent for row in rows)
 
 
@@ -188,7 +201,11 @@ def _cell(value: Any) -> str:
 def _shown(name: str, row: Row) -> str:
     value = row.get(name)
     if value is None:
-        text = ""
+        # a budget's source of which nothing is known is no source without effect
+        unstated = name == "base_volume_contribution_m3" and "is stated" in row.get("reason", "")
+        text = "not stated" if unstated else ""
+    elif name == "version":
+        text = str(value) if value > 1 else ""
     elif name == "measured_fraction":
         text = f"{math.floor(value * 1e4) / 100:.2f} %"
     elif name == "flags":
@@ -197,14 +214,18 @@ def _shown(name: str, row: Row) -> str:
             for flag, short in SHORT_FLAGS.items()
             if flag in row["shares"]
         )
+    elif name == "variance_fraction":
+        text = f"{_percent(value) if value else 0} %"
+    elif name == "base_volume_contribution_percent":
+        text = f"{value:.4f}" if value == 0 or abs(value) >= 5e-5 else "<0.0001"
     elif isinstance(value, float):
         text = _number(value)
     elif name in {"period_start", "since", "until", "now"}:
         text = str(value)[:16].replace("T", " ")
-    elif name == "beyond_tolerance":
+    elif name in {"significant", "beyond_tolerance"}:
         answer = str(value).partition(":")[0]
         text = "not judged" if answer == "cannot be judged" else answer
-        if row.get("part"):
+        if row.get("part") and name == "beyond_tolerance":
             text = textwrap.fill(f"{text}, {row['part']}", width=len("no, on 3 of 31"))
     else:
         text = str(value)

@@ -12,10 +12,11 @@ from functools import lru_cache
 from typing import Any
 
 from meterfix import units
-from meterfix.calc.balance.envelopes import BALANCE_COLUMNS
+from meterfix.calc.balance.envelopes import BALANCE_COLUMNS, NO_UNCERTAINTY, why_no_uncertainty
 from meterfix.calc.balance.months import BASE_CHANGES
+from meterfix.calc.uncertainty import COVERAGE_FACTOR
 from meterfix.faces.asked import Asked, Row, time_text
-from meterfix.frames import FLAGS, HOURLY_INDEX, MISSING
+from meterfix.frames import FLAGS, HOURLY_INDEX, MISSING, SENSITIVE, Floats
 from meterfix.frames import TOTALS as QUANTITIES
 from meterfix.model.calendar import HOUR
 from meterfix.run.figures import ABSENT
@@ -23,8 +24,16 @@ from meterfix.run.opening import OpenSite
 from meterfix.store.ledger import Ledger
 from meterfix.store.values import decode_array
 
-NO_UNCERTAINTY = "no uncertainty yet"
 UNIT = {"mass": "kg", "base_volume": "m3", "energy": "MJ"}
+FIGURE = {"mass": "mass_kg", "base_volume": "base_volume_m3", "energy": "energy_J"}
+UNCERTAINTY = {
+    "mass": "mass_expanded_uncertainty_kg",
+    "base_volume": "base_volume_expanded_uncertainty_m3",
+    "energy": "energy_expanded_uncertainty_J",
+}
+"""Columns of a stored total by quantity."""
+VERDICTS = ("significant", "beyond_tolerance")
+EXPANDED = "uncertainties are expanded, k = 2"
 EVERY_FLAG = [name for name, _ in FLAGS]
 EVERY_LOSS = [name for name, _ in MISSING]
 
@@ -35,7 +44,7 @@ def totals(opened: OpenSite, asked: Asked) -> list[Row]:
     where: dict[str, Any] = {"kind": kind}
     if asked.meter is not None:
         where["meter"] = asked.meter
-    stored = _standing(
+    stored = standing(
         opened.ledger,
         "open_total",
         "total_revision",
@@ -51,7 +60,7 @@ def totals(opened: OpenSite, asked: Asked) -> list[Row]:
 
 def balances(opened: OpenSite, asked: Asked) -> list[Row]:
     """Return balances per hour, gas day or month."""
-    stored = _standing(
+    stored = standing(
         opened.ledger,
         "open_balance",
         "balance_revision",
@@ -76,15 +85,15 @@ def _total(row: Mapping[str, Any]) -> Row:
     flags, missing = json.loads(row["flags"]), json.loads(row["missing"])
     energy = row["energy_J"]
     return {
-        **_period(row),
+        **period(row),
         "meter": row["meter"],
-        "base_pressure_kPa": _in(row["base_pressure_Pa"], "kPa"),
-        "base_temperature_degC": _in(row["base_temperature_K"], "degC"),
+        **base_terms(row),
         "line_volume_m3": row["line_volume_m3"],
         "base_volume_m3": row["base_volume_m3"],
         "mass_kg": row["mass_kg"],
         "energy_MJ": _divided(energy, 1e6),
-        **_energy_terms(row, known=energy is not None),
+        **_uncertainties(row),
+        **energy_terms(row, known=energy is not None),
         "flow_time_s": row["flow_time_s"],
         "measured_fraction": row["measured_fraction"],
         "basis": row.get("basis", "measured"),
@@ -92,8 +101,39 @@ def _total(row: Mapping[str, Any]) -> Row:
         "shares": flags["shares"],
         "reason": _reasons(missing, flags["without"], row),
         "losses": [*_losses(missing), *_parts_without(flags["without"], row)],
-        **_status(row),
+        "unstated": _unstated(row),
+        **status(row),
     }
+
+
+def _uncertainties(row: Mapping[str, Any]) -> Row:
+    """Return the expanded uncertainties (k = 2); the percentage is the base volume's."""
+    base, base_doubt = row["base_volume_m3"], row["base_volume_expanded_uncertainty_m3"]
+    return {
+        "base_volume_expanded_uncertainty_m3": base_doubt,
+        "mass_expanded_uncertainty_kg": row["mass_expanded_uncertainty_kg"],
+        "energy_expanded_uncertainty_MJ": _divided(row["energy_expanded_uncertainty_J"], 1e6),
+        "expanded_uncertainty_percent": 100.0 * base_doubt / base
+        if base and base_doubt is not None
+        else None,
+    }
+
+
+def _unstated(row: Mapping[str, Any]) -> list[str]:
+    """Return why figures of a total's row have no uncertainty, and which where not all lack it."""
+    text = row["uncertainty"]
+    known: Mapping[str, Any] = {} if text is None else json.loads(text)["contributions"]
+    names = [name for name in SENSITIVE if row[FIGURE[name]] is not None]
+    lacking: dict[str, list[str]] = {}
+    for name in names:
+        if row[UNCERTAINTY[name]] is None:
+            at = SENSITIVE.index(name)
+            unstated = [source for source, amounts in known.items() if amounts[at] is None]
+            lacking.setdefault(why_no_uncertainty(unstated), []).append(name)
+    return [
+        why if some == names else f"{', '.join(some).replace('_', ' ')}: {why}"
+        for why, some in lacking.items()
+    ]
 
 
 def _hours(ledger: Ledger, row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
@@ -102,6 +142,9 @@ def _hours(ledger: Ledger, row: Mapping[str, Any], asked: Asked) -> Iterator[Row
     if revision:
         where["revision"] = revision
     stored = ledger.rows("hourly_record" if revision else "open_hourly", where=where)[0]
+    doubts = None
+    if stored["standard_uncertainty"] is not None:
+        doubts = decode_array(stored["standard_uncertainty"], len(SENSITIVE)) * COVERAGE_FACTOR
     for number, hour in enumerate(decode_array(stored["statistics"], stored["columns"])):
         value = {name: float(hour[at]) for name, at in HOURLY_INDEX.items()}
         start = row["period_start_us"] + number * HOUR
@@ -113,6 +156,7 @@ def _hours(ledger: Ledger, row: Mapping[str, Any], asked: Asked) -> Iterator[Row
             "base_volume_m3": _known(value["base_volume"]),
             "mass_kg": _known(value["mass"]),
             "energy_J": _known(value["energy"]),
+            **_hour_doubt(value, None if doubts is None else doubts[number]),
             "flow_time_s": value["flow_time"],
             "measured_fraction": value["measured_time"] / value["duration"],
             "measured_time_s": value["measured_time"],
@@ -123,6 +167,16 @@ def _hours(ledger: Ledger, row: Mapping[str, Any], asked: Asked) -> Iterator[Row
         }
         if asked.covers(shown):
             yield _total(shown)
+
+
+def _hour_doubt(value: Mapping[str, float], doubt: Floats | None) -> Row:
+    """Return an hour's expanded uncertainties under the names of a total's row."""
+    return {
+        name: None
+        if doubt is None or _known(value[quantity]) is None
+        else _known(float(doubt[SENSITIVE.index(quantity)]))
+        for quantity, name in UNCERTAINTY.items()
+    }
 
 
 def _known_shares(value: Mapping[str, float]) -> dict[str, float]:
@@ -177,7 +231,9 @@ def _reasons(
     parts = [*_losses(missing), *_lacking(without).values()]
     if row["base_pressure_Pa"] is None:
         parts.append(f"base volume: {BASE_CHANGES}")
-    parts.append(f"uncertainty: {NO_UNCERTAINTY}")
+    parts += _unstated(row)
+    if row["base_volume_m3"] == 0 and row[UNCERTAINTY["base_volume"]] is not None:
+        parts.append("no uncertainty in percent of nothing")
     if row.get("reason"):
         parts.append(f"revision: {row['reason']}")
     return "; ".join(parts)
@@ -189,10 +245,17 @@ def _reasons(
 def _balance(row: Mapping[str, Any]) -> Row:
     reasons = json.loads(row["reason"])
     by = 1e6 if row["quantity"] == "energy" else 1.0
-    judged = row["beyond_tolerance"] != "cannot be judged"
-    part = reasons.get("beyond_tolerance", "") if judged else ""
+    # a verdict that is one has a reason only where it rests on a part of the period
+    parts = {
+        name: reasons[name]
+        for name in VERDICTS
+        if row[name] != "cannot be judged" and reasons.get(name)
+    }
+    unstated = ""
+    if row["imbalance"] is not None and row["expanded_uncertainty"] is None:
+        unstated = reasons.get("uncertainty") or NO_UNCERTAINTY
     return {
-        **_period(row),
+        **period(row),
         "envelope": row["envelope"],
         "quantity": row["quantity"],
         "in": _divided(row["inflow"], by),
@@ -200,31 +263,30 @@ def _balance(row: Mapping[str, Any]) -> Row:
         "vented": _divided(row["vented"], by),
         "storage_change": _divided(row["storage_change"], by),
         "imbalance": _divided(row["imbalance"], by),
-        "expanded_uncertainty": None,
+        "expanded_uncertainty": _divided(row["expanded_uncertainty"], by),
         "tolerance": _divided(row["tolerance"], by),
         "unit": UNIT[row["quantity"]],
-        "base_pressure_kPa": _in(row["base_pressure_Pa"], "kPa"),
-        "base_temperature_degC": _in(row["base_temperature_K"], "degC"),
-        **_energy_terms(row, known=row["quantity"] == "energy"),
-        "significant": _verdict(row["significant"], reasons.get("significant")),
-        "beyond_tolerance": _verdict(row["beyond_tolerance"], reasons.get("beyond_tolerance")),
+        **base_terms(row),
+        **energy_terms(row, known=row["quantity"] == "energy"),
+        **{name: _verdict(row[name], reasons.get(name)) for name in VERDICTS},
         "measured_fraction": row["measured_fraction"],
-        "part": part,
+        "part": parts.get("beyond_tolerance", ""),
         "losses": [reasons["input"]] if reasons.get("input") else [],
+        "unstated": [unstated] if unstated else [],
         "reason": "; ".join(
             text
             for text in (
                 reasons.get("input"),
-                f"beyond tolerance: {part}" if part else None,
+                *(f"{name.replace('_', ' ')}: {part}" for name, part in parts.items()),
                 f"storage change: {reasons['storage_change']}"
                 if "storage_change" in reasons
                 else None,
-                f"uncertainty: {NO_UNCERTAINTY}",
+                unstated,
                 f"revision: {row['revision_reason']}" if row.get("revision_reason") else None,
             )
             if text
         ),
-        **_status(row),
+        **status(row),
     }
 
 
@@ -243,6 +305,9 @@ def _balance_hours(row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
             "outflow": value["out"],
             "vented": value["vented"],
             "imbalance": value["imbalance"],
+            "expanded_uncertainty": None
+            if value["standard_uncertainty"] is None
+            else COVERAGE_FACTOR * value["standard_uncertainty"],
             "tolerance": None,
             "measured_fraction": value["measured_fraction"],
             "significant": "cannot be judged",
@@ -251,7 +316,8 @@ def _balance_hours(row: Mapping[str, Any], asked: Asked) -> Iterator[Row]:
                 {
                     "input": by_hour[number] if by_hour else "",
                     "storage_change": reasons.get("storage_change", ""),
-                    "significant": reasons.get("significant", ""),
+                    "uncertainty": reasons.get("uncertainty", ""),
+                    "significant": reasons.get("hours", ""),
                     "beyond_tolerance": reasons.get("hours", ""),
                 }
             ),
@@ -275,7 +341,7 @@ def _verdict(answer: str, reason: str | None) -> str:
 # --- shared ------------------------------------------------------------------------------------
 
 
-def _standing(
+def standing(
     ledger: Ledger, open_table: str, table: str, group: Sequence[str], where: Mapping[str, Any]
 ) -> list[Row]:
     """Return open rows, and the latest revision of closed ones."""
@@ -285,7 +351,8 @@ def _standing(
     ]
 
 
-def _period(row: Mapping[str, Any]) -> Row:
+def period(row: Mapping[str, Any]) -> Row:
+    """Return a stored row's period under the names that are shown."""
     day = date.fromisoformat(row["gas_day"])
     return {
         "period_start": time_text(row["period_start_us"]),
@@ -295,7 +362,8 @@ def _period(row: Mapping[str, Any]) -> Row:
     }
 
 
-def _status(row: Mapping[str, Any]) -> Row:
+def status(row: Mapping[str, Any]) -> Row:
+    """Return a stored row's status and revision."""
     revision = row.get("revision")
     return {"status": "provisional" if revision else "open", "revision": revision}
 
@@ -314,7 +382,15 @@ def _in(value: float | None, unit: str) -> float | None:
     return None if value is None else units.render(value, unit)
 
 
-def _energy_terms(row: Mapping[str, Any], *, known: bool) -> Row:
+def base_terms(row: Mapping[str, Any]) -> Row:
+    """Return what the row's base volume stands at."""
+    return {
+        "base_pressure_kPa": _in(row["base_pressure_Pa"], "kPa"),
+        "base_temperature_degC": _in(row["base_temperature_K"], "degC"),
+    }
+
+
+def energy_terms(row: Mapping[str, Any], *, known: bool) -> Row:
     """Return what the row's energy stands at; nothing where it has none."""
     kind, kelvin = row["calorific_value_kind"], row["combustion_reference_temperature_K"]
     return {
@@ -326,13 +402,18 @@ def _energy_terms(row: Mapping[str, Any], *, known: bool) -> Row:
 def remarks(what: str, rows: Sequence[Mapping[str, Any]]) -> str:
     """Return what the figures of a table stand at, in one sentence or two."""
     rule = {
-        "totals": "measured time only, never scaled up",
-        "balances": "in = out + vented + imbalance; storage is not configured",
+        "totals": f"measured time only, never scaled up; {EXPANDED}",
+        "balances": f"in = out + vented + imbalance; storage is not configured; {EXPANDED}",
+        "budget": "one standard deviation of each source, with the sign in which it moves the "
+        "total; shares are of the variance of the base volume",
     }
     if what not in rule or not rows:
         return ""
-    text = f"{_stand_at(rows)}{rule[what]}; {NO_UNCERTAINTY}."
-    return text[0].upper() + text[1:] if text.startswith("base") else text
+    still_open = any(row["status"] == "open" for row in rows)
+    # a table of balances has no room for the status
+    hint = "; without rev: still open" if what == "balances" and still_open else ""
+    text = f"{_stand_at(rows)}{rule[what]}{hint}."
+    return text[0].upper() + text[1:] if text.startswith(("base", "one")) else text
 
 
 def _stand_at(rows: Sequence[Mapping[str, Any]]) -> str:

@@ -110,7 +110,7 @@ def test_a_malformed_line(taken):
             "line": 4,
             "column": None,
             "text": "2026-10-02T08:12:00Z;102 what",
-            "reason": "the line has 1 cells; its header has 4 columns",
+            "reason": "the line has 1 cell; its header has 4 columns",
         }
     ]
 
@@ -247,7 +247,7 @@ def test_an_impossible_site_file_tells_ten_mistakes_at_once(one_meter, invoke):
         assert told[0]["allowed"]
         assert told[0]["where"].startswith("site.toml, [")
     result = invoke("check", "--site", one_meter.site, exit_code=2)
-    assert "10 mistake(s)" in result.stderr
+    assert "10 mistakes" in result.stderr
     for mistake in found["mistakes"]:
         assert all(part in result.stderr for part in mistake.values())
 

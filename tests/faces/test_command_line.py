@@ -69,9 +69,9 @@ def test_the_schema_is_a_json_schema_and_loads_no_gas_model():
     schema = json.loads(done.stdout)
     assert schema["$schema"] == "https://json-schema.org/draft/2020-12/schema"
     assert schema["type"] == "object"
-    assert {"site", "contract", "source", "signal", "gas", "meter", "envelope"} == set(
-        schema["properties"]
-    )
+    assert set(schema["properties"]) == {
+        "site", "contract", "source", "signal", "gas", "meter", "envelope", "uncertainty"
+    }  # fmt: skip
     assert {"site", "source", "signal", "gas", "meter"} <= set(schema["required"])
 
 
@@ -102,7 +102,8 @@ def test_a_missing_site_file_is_exit_2(tmp_path, invoke, command):
         (("process", "--now", "2026-10-04"), "needs a time"),
         (("show", "totals", "--from", "2026-13-01"), "is not a date"),
         (("show", "totals", "--by", "week"), "'week' is not one of"),
-        (("show", "files", "--by", "hour"), "--by goes with totals and balances"),
+        (("show", "files", "--by", "hour"), "--by goes with totals, balances and budget"),
+        (("show", "budget", "--by", "hour"), "per gas day and month, not per hour"),
         (("show", "passes", "--meter", "FT-101"), "does not go with passes"),
         (("show", "totals", "--meter", "FT-999"), "no meter 'FT-999'; there are FA-401"),
         (("show", "balances", "--meter", "FT-999"), "no meter 'FT-999'"),
@@ -118,7 +119,7 @@ def test_bad_arguments_are_exit_2(works, invoke, arguments, said):
     assert said in " ".join(result.stderr.split())
 
 
-@pytest.mark.parametrize("what", ["totals", "balances", "alerts", "files", "passes"])
+@pytest.mark.parametrize("what", ["totals", "balances", "budget", "alerts", "files", "passes"])
 def test_show_before_the_first_process(one_meter, invoke, what):
     """Without a ledger `show` says so, exits with 2 and makes no file."""
     before = sorted(one_meter.path.rglob("*"))
@@ -137,9 +138,9 @@ def test_verify_before_the_first_process(one_meter, invoke):
 
 def test_process_without_logs(one_meter, invoke):
     """A site without logs is no failure: its site file is recorded, and every view is empty."""
-    assert "0 file(s), 0 new readings" in one_meter.process().stdout
+    assert "0 files, 0 new readings" in one_meter.process().stdout
     assert "nothing new" in one_meter.process().stdout
-    for what in ("totals", "balances", "alerts", "files"):
+    for what in ("totals", "balances", "budget", "alerts", "files"):
         assert one_meter.json(what) == []
         assert "nothing to show" in one_meter.text(what)
     assert [row["kind"] for row in one_meter.json("passes")] == ["pass", "heartbeat"]
@@ -170,10 +171,13 @@ def test_process_as_json(own_works, invoke):
         "passes": 0,
         "files": 0,
         "readings": 0,
+        "files_judged_again": 0,
         "meter_days": 0,
         "rejected": [],
         "waiting": [],
         "crashes": [],
+        "alerts": [],
+        "recorded": [],
     }
 
 

@@ -38,6 +38,7 @@ TOTALS = [
     "status",
     "revision",
     "combustion_reference_temperature_degC",
+    "month",
 ]
 BALANCES = [
     "envelope",
@@ -63,6 +64,7 @@ BALANCES = [
     "base_temperature_degC",
     "calorific_value_kind",
     "combustion_reference_temperature_degC",
+    "month",
 ]
 ALERTS = [
     "kind",
@@ -84,10 +86,17 @@ VIEWS = (
     ("balances", "hour"),
     ("balances", "gas-day"),
     ("balances", "month"),
+    ("budget", "gas-day"),
+    ("budget", "month"),
     ("alerts", None),
     ("files", None),
     ("passes", None),
 )
+UNCERTAINTY = {
+    "base_volume_m3": "base_volume_expanded_uncertainty_m3",
+    "mass_kg": "mass_expanded_uncertainty_kg",
+    "energy_MJ": "energy_expanded_uncertainty_MJ",
+}
 PERIODS = [view for view in VIEWS if view[1] is not None]
 WHEN = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?Z")
 
@@ -165,7 +174,8 @@ def test_tables_fit_100_columns(works, what, by):
 @pytest.mark.parametrize(("what", "by"), PERIODS)
 def test_a_table_shows_no_traces_of_other_periods(works, what, by):
     """A table of hours shows instants, of gas days dates, of months months: one of them."""
-    heading = next(line for line in works.text(what, *options(by)).splitlines() if "status" in line)
+    lines = works.text(what, *options(by)).splitlines()
+    heading = next(line for line in lines if re.match("(meter|envelope) ", line))
     shown = set(re.findall(r"from \(UTC\)|gas day|month", heading))
     assert shown == {{"hour": "from (UTC)", "gas-day": "gas day", "month": "month"}[by]}
 
@@ -212,17 +222,26 @@ def test_a_number_that_is_not_known_has_a_reason(works):
     assert all("no calorific value" in row["reason"] for row in without)
     partly = [row for row in works.json("totals", "--by", "hour") if row["measured_fraction"] < 1]
     assert all(re.search(r"\d s", row["reason"]) for row in partly)
-    assert all("uncertainty" in row["reason"] for row in rows)
-    for name in TOTALS:
-        if "uncertainty" in name:
-            assert {row[name] for row in rows} == {None}
+    for row in rows:
+        for figure, name in UNCERTAINTY.items():
+            assert (row[figure] is None) == (row[name] is None), name
+        percent = row["expanded_uncertainty_percent"]
+        assert (percent is None) == ("no uncertainty in percent of nothing" in row["reason"])
+    assert {
+        row["base_volume_m3"] for row in rows if row["expanded_uncertainty_percent"] is None
+    } == {0.0}
 
 
 def test_a_balance_says_what_it_cannot_judge(works):
-    """Significance waits for the uncertainty and says so; the tolerance's verdict is a word."""
+    """Both verdicts are a word; an hour has none, for gas may stay in the pipes."""
     for by in ("hour", "gas-day", "month"):
         for row in works.json("balances", "--by", by):
-            assert row["significant"] == "cannot be judged: no uncertainty yet"
+            for name in ("significant", "beyond_tolerance"):
+                if by == "hour":
+                    assert row[name] == "cannot be judged: storage is not configured"
+                elif row["imbalance"] is not None:
+                    limit = row["expanded_uncertainty" if name == "significant" else "tolerance"]
+                    assert row[name] == ("yes" if abs(row["imbalance"]) > limit else "no")
             assert re.fullmatch("yes|no|cannot be judged: .+", row["beyond_tolerance"])
             assert (row["imbalance"] is None) <= row["beyond_tolerance"].startswith("cannot")
             assert (row["unit"], row["quantity"]) in {

@@ -114,8 +114,10 @@ def test_a_balance_as_wide_as_it_can_be_loses_no_figure():
         "in": 1234567.0,
         "out": 1234567.0,
         "imbalance": -84.3115,
+        "expanded_uncertainty": 1234.56,
         "tolerance": 1627.43,
         "unit": "kg",
+        "significant": "cannot be judged: no uncertainty is stated for a thing of a long name",
         "beyond_tolerance": "cannot be judged: missing input",
         "measured_fraction": 0.9876,
         "status": "provisional",
@@ -123,8 +125,31 @@ def test_a_balance_as_wide_as_it_can_be_loses_no_figure():
     }
     text = printed("balances", [row], by="gas-day")
     assert max(map(len, text.splitlines())) <= 100
-    for part in ("envelope", "-84.3115", "1627.43", "not judged", "98.76 %", "provisional", "12"):
+    for part in ("envelope", "-84.3115", "1234.56", "1627.43", "98.76 %", "12"):
         assert part in text
+    assert text.count("not judged") == 2
+
+
+@pytest.mark.parametrize(
+    ("share", "percent", "shown"),
+    [
+        (0.81351, 0.249751, ("0.2498", "81.35 %")),
+        (8.2e-6, -0.000806, ("-0.0008", "<0.01 %")),
+        (1e-9, 0.00001, ("<0.0001", "<0.01 %")),
+        (0.0, 0.0, ("0.0000", "0 %")),
+    ],
+)
+def test_a_budget_shows_no_trace_as_none(share, percent, shown):
+    """Shares and percentages have fixed digits; what is too small for them is not a zero."""
+    row = {
+        "meter": "M",
+        "gas_day": "2026-10-01",
+        "source_of_uncertainty": "M bore",
+        "base_volume_contribution_percent": percent,
+        "variance_fraction": share,
+    }
+    line = printed("budget", [row], by="gas-day").splitlines()[-1]
+    assert " ".join(line.split()) == " ".join(("M 2026-10-01 M bore", *shown))
 
 
 @pytest.mark.parametrize(

@@ -14,7 +14,9 @@ from packaging.utils import canonicalize_name
 from packaging.version import Version
 
 from meterfix import __version__
+from meterfix.faces.columns import SHORT_FLAGS
 from meterfix.faces.commands import main
+from meterfix.frames import FLAGS
 
 ROOT = Path(__file__).parents[2]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -131,3 +133,14 @@ def test_the_changelog_opens_with_this_version():
     newest = re.search(r"^## (\S+)\n\n### (.+)$", text, re.MULTILINE)
     assert newest is not None
     assert newest.groups() == (__version__, "Figures changed")
+
+
+def test_the_glossary_holds_every_flag():
+    """The README's table of flags has each one, in order, under both of its names."""
+    told = re.findall(r"^\| ([^|`]+?) \| `(\w+)` \|", README, re.MULTILINE)
+    assert told == [(SHORT_FLAGS[name], name) for name, _ in FLAGS]
+
+
+def test_the_readme_is_short():
+    """It can be read in one go."""
+    assert len(README.splitlines()) <= 220
