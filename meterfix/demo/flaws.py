@@ -7,13 +7,13 @@ that what the rule between instants makes of it is beyond doubt.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from meterfix.demo.loads import stream_of
-from meterfix.demo.works import Month
+from meterfix.demo.works import DP, PRESSURE, TAG_SNAPSHOT_S, TEMPERATURE, Month
 from meterfix.model.calendar import HOUR, SECOND
 
 Instants = NDArray[np.int64]
@@ -21,6 +21,10 @@ Truths = NDArray[np.bool_]
 
 GARBLED = ("{half}", "#~#  log#er restart 0x3F", "{time}", "{row}{delimiter}?{delimiter}?")
 """What may stand where a row should: each loses the whole row."""
+
+GOOD_CODE, DOUBTFUL_CODE = "192", "64"
+BAD_CODES = ("0", "24", "0", "24")
+"""Quality codes of the historian."""
 
 _SPACING_ROWS = 17
 
@@ -43,6 +47,11 @@ class Flaws:
     """(last row before, first row after)."""
     shifted: tuple[int, int, int] | None = None
     """From the first knot on, before the second, rows are stamped later by the third."""
+    tags: bool = False
+    """A row holds one signal: garbled ones are the dp's, and a bad cell's text is the quality
+    code beside it."""
+    doubtful: frozenset[int] = frozenset()
+    """Knots whose dp stands there with the quality of a doubtful one."""
 
     def shown(self, knots: Instants) -> Truths:
         """Return which knots have a row at all (garbled ones included)."""
@@ -60,24 +69,24 @@ class Flaws:
 
     def good(self, knots: Instants, kind: str) -> Truths:
         """Return which of the knots have a usable cell of the kind."""
-        lost = [*self.garbled, *(knot for knot, of in self.bad_cells if of == kind)]
+        rows = self.garbled if kind == DP or not self.tags else ()
+        lost = [*rows, *(knot for knot, of in self.bad_cells if of == kind)]
         return ~np.isin(knots, np.array(lost, dtype=np.int64))
 
     def merged(self, other: Flaws) -> Flaws:
         """Return these flaws with another's rows garbled as well: what a shared file loses."""
-        return Flaws(
-            garbled={**self.garbled, **other.garbled},
-            bad_cells=self.bad_cells,
-            doubled=self.doubled,
-            headers=self.headers,
-            swapped=self.swapped,
-            gaps=self.gaps,
-            shifted=self.shifted,
-        )
+        return replace(self, garbled={**self.garbled, **other.garbled})
 
 
 def draw_flaws(
-    seed: int, month: Month, knots: Instants, name: str, *, rows: int, cells: int
+    seed: int,
+    month: Month,
+    knots: Instants,
+    name: str,
+    *,
+    rows: int,
+    cells: int,
+    tags: bool = False,
 ) -> Flaws:
     """Draw the flaws of one log over the whole month.
 
@@ -93,6 +102,8 @@ def draw_flaws(
         A run, or a shared file's source.
     rows, cells : int
         How many rows are garbled, and how many cells of each kind are bad.
+    tags : bool
+        Whether a row of the log holds one signal only.
 
     Returns
     -------
@@ -110,10 +121,15 @@ def draw_flaws(
     chosen = [int(knots[n]) for n in rng.permutation(free)[:wanted]]
     garbled = {chosen.pop(): GARBLED[n % len(GARBLED)] for n in range(rows)}
     bad: dict[tuple[int, str], str] = {}
-    for kind, text in (("PDT", "BAD"), ("PT", ""), ("TT", "-9999"), ("PT", "BAD")):
+    texts = ("BAD", "", "-9999", "BAD") if not tags else BAD_CODES
+    for kind, text in zip((DP, PRESSURE, TEMPERATURE, PRESSURE), texts, strict=True):
         for _ in range(cells):
-            bad[chosen.pop(), kind] = text
+            knot = chosen.pop()
+            if tags and kind != DP:  # at which it is logged
+                knot -= knot % (TAG_SNAPSHOT_S * SECOND)
+            bad[knot, kind] = text
     step = int(knots[1] - knots[0])
+    uncertain = chosen.pop() if tags else 0
     special = sum(name.encode()) % 3
     block = chosen.pop()
     return Flaws(
@@ -124,6 +140,8 @@ def draw_flaws(
         swapped=frozenset({chosen.pop()}) if special == 2 else frozenset(),
         gaps=_gaps_of(month, name),
         shifted=_shift_of(month, name),
+        tags=tags,
+        doubtful=frozenset(uncertain + n * step for n in range(5)) if tags else frozenset(),
     )
 
 

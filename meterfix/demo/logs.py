@@ -1,7 +1,8 @@
 """The simulated logs as files: comma-separated text, gzip-compressed, by day.
 
-Three kinds: a file per run and UTC day (gas), one file per local day for all air runs (with
-semicolons, decimal commas and local time), one file per UTC day for the barometer.
+Four kinds: a file per run and UTC day (gas), one file per UTC day for the gas runs that the
+historian sees (a row per tag and time), one file per local day for all air runs (with semicolons,
+decimal commas and local time), one file per UTC day for the barometer.
 """
 
 from __future__ import annotations
@@ -13,15 +14,18 @@ from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from meterfix.demo.transmitters import (
-    BAROMETER_WRITING,
+from meterfix.demo.flaws import DOUBTFUL_CODE, GOOD_CODE
+from meterfix.demo.transmitters import BAROMETER_WRITING, texts, writing_of
+from meterfix.demo.works import (
+    COMPRESSED_AIR,
     DP,
+    HISTORIAN,
     PRESSURE,
+    STRAY_TAG,
     TEMPERATURE,
-    texts,
-    writing_of,
+    ZONE,
+    Run,
 )
-from meterfix.demo.works import COMPRESSED_AIR, ZONE
 from meterfix.model.calendar import from_microseconds
 
 if TYPE_CHECKING:
@@ -38,8 +42,9 @@ def files_of(simulated: Simulated) -> Iterator[tuple[str, bytes]]:
     """
     air = [log for log in simulated.run_logs.values() if log.run.feed is COMPRESSED_AIR]
     for log in simulated.run_logs.values():
-        if log.run.feed is not COMPRESSED_AIR:
+        if log.run.feed not in (COMPRESSED_AIR, HISTORIAN):
             yield from _run_files(log, simulated.digits)
+    yield from _historian_files(simulated)
     yield from _air_files(air, simulated.air_file_flaws, simulated.digits)
     yield from _barometer_files(simulated)
 
@@ -108,7 +113,7 @@ def _cells(log: RunLog, kind: str, digits: int | None, decimal_mark: str) -> lis
     values = writing.unit_values(log.logged[kind], log.run.dp_range)
     cells = texts(values, writing.decimals, digits, decimal_mark)
     bad = {knot: text for (knot, of), text in log.flaws.bad_cells.items() if of == kind}
-    if bad:
+    if bad and not log.run.feed.tags:
         cells = [bad.get(knot, cell) for knot, cell in zip(log.knots.tolist(), cells, strict=True)]
     return cells
 
@@ -127,12 +132,7 @@ def _with_flaws(
     for knot, text in rows:
         line = text
         if knot in flaws.garbled:
-            line = flaws.garbled[knot].format(
-                half=text[: len(text) // 3],
-                time=text.split(delimiter)[0],
-                row=text,
-                delimiter=delimiter,
-            )
+            line = _garbled(flaws.garbled[knot], text, delimiter)
         if knot in flaws.headers:
             lines.append(header)
         if knot in flaws.swapped:
@@ -145,6 +145,77 @@ def _with_flaws(
     if late is not None:
         lines.append(late)
     return lines
+
+
+def _garbled(pattern: str, row: str, delimiter: str) -> str:
+    """Return what stands where a row should."""
+    return pattern.format(
+        half=row[: len(row) // 3],
+        time=row.split(delimiter, maxsplit=1)[0],
+        row=row,
+        delimiter=delimiter,
+    )
+
+
+def tag_of(kind: str, run: Run) -> str:
+    """Return the tag under which the historian knows a run's signal."""
+    return f"{kind}-{run.number}.PV"
+
+
+def _historian_files(simulated: Simulated) -> Iterator[tuple[str, bytes]]:
+    """Yield the historian's exports: rows of all its tags in order of time."""
+    rows: list[tuple[int, int, list[str]]] = []
+    logs = [log for log in simulated.run_logs.values() if log.run.feed is HISTORIAN]
+    for place, log in enumerate(logs):
+        for instant, lines in _tag_lines(log, simulated.digits):
+            rows.append((instant, place, lines))
+    rows += [
+        (at, len(logs), [f"{_stamp(at)},{STRAY_TAG},12.0,{GOOD_CODE}"])
+        for at in simulated.stray_lines
+    ]
+    rows.sort(key=lambda row: row[:2])
+    for day, some in _by_day([from_microseconds(instant) for instant, _, _ in rows]):
+        body = [line for _, _, lines in rows[some] for line in lines]
+        yield f"{HISTORIAN.name}/export_{day}.csv.gz", _compressed([_TAG_HEADER, *body])
+
+
+_TAG_HEADER = "time,tag,value,quality"
+
+
+def _stamp(instant: int) -> str:
+    return f"{from_microseconds(instant):%Y-%m-%dT%H:%M:%SZ}"
+
+
+def _tag_lines(log: RunLog, digits: int | None) -> list[tuple[int, list[str]]]:
+    """Return a run's lines by instant, with what goes wrong in them."""
+    flaws = log.flaws
+    cells = {kind: _cells(log, kind, digits, ".") for kind, _ in _COLUMNS}
+    shown = flaws.shown(log.knots)
+    found: list[tuple[int, list[str]]] = []
+    again: dict[int, list[str]] = {}
+    for n, (knot, instant) in enumerate(
+        zip(log.knots.tolist(), log.instants.tolist(), strict=True)
+    ):
+        if not shown[n]:
+            continue
+        stamp = _stamp(instant)
+        lines = [_TAG_HEADER] if knot in flaws.headers else []
+        for kind, _ in _COLUMNS:
+            if not log.written[kind][n]:
+                continue
+            code = DOUBTFUL_CODE if kind == DP and knot in flaws.doubtful else GOOD_CODE
+            code = flaws.bad_cells.get((knot, kind), code)
+            row = f"{stamp},{tag_of(kind, log.run)},{cells[kind][n]},{code}"
+            if kind == DP and knot in flaws.garbled:
+                row = _garbled(flaws.garbled[knot], row, ",")
+            lines.append(row)
+        found.append((instant, lines))
+        for first, last in flaws.doubled:
+            if first <= knot <= last:
+                again.setdefault(last, []).extend(lines)
+            if knot == last:
+                found.append((instant, again.pop(last)))
+    return found
 
 
 def air_header(kind: str, run_name: str) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import cache
 from itertools import pairwise
@@ -10,14 +11,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from meterfix.demo.air import air_density
+from meterfix.demo.calorific import gross_calorific_value
 from meterfix.demo.detail import DetailGas
-from meterfix.demo.plate import (
-    Plate,
-    Stream,
-    differential_pressure_of,
-    mass_flow_of,
-    pressure_loss,
-)
+from meterfix.demo.device import Device, Stream
+from meterfix.demo.flow import differential_pressure_of, mass_flow_of, pressure_loss
 from meterfix.demo.works import AFTER, BASE_PRESSURE, BASE_TEMPERATURE, BEFORE, Month, Run
 
 Floats = NDArray[np.float64]
@@ -37,15 +34,17 @@ class Signals:
 
 @dataclass(frozen=True, slots=True)
 class Period:
-    """An interval [start, end) [UTC us] in which a run's plate and gas stand still."""
+    """An interval [start, end) [UTC us] in which a run's device and gas stand still."""
 
     start: int
     end: int
-    plate: Plate
+    device: Device
     gas: DetailGas | None
     """None for air."""
     base_density: float
     """kg/m3 at base conditions."""
+    calorific_value: float
+    """Gross, per volume at base conditions [J/m3]; NaN for air."""
 
 
 @cache
@@ -60,19 +59,20 @@ def periods(run: Run, month: Month, start: int, end: int) -> tuple[Period, ...]:
     edges = {start, end}
     if natural:
         edges.add(month.composition_change)
-    if run.new_bore is not None:
-        edges.add(month.plate_exchange)
+    if run.spare is not None:
+        edges.add(month.tube_exchange)
     inside = sorted(edge for edge in edges if start <= edge <= end)
     found = []
     for first, last in pairwise(inside):
         gas = None
         if natural:
             gas = after if first >= month.composition_change else before
-        plate = run.plate
-        if run.new_bore is not None and first >= month.plate_exchange:
-            plate = Plate(run.new_bore, plate.pipe_diameter, plate.tappings)
+        device = run.device
+        if run.spare is not None and first >= month.tube_exchange:
+            device = run.spare
         base = density(gas, np.array([BASE_PRESSURE]), np.array([BASE_TEMPERATURE]))
-        found.append(Period(first, last, plate, gas, float(base[0])))
+        value = math.nan if gas is None else gross_calorific_value(gas.fractions)
+        found.append(Period(first, last, device, gas, float(base[0]), value))
     return tuple(found)
 
 
@@ -96,7 +96,7 @@ def signals_of(
     Parameters
     ----------
     run, period : Run, Period
-        The metering run, its plate and gas.
+        The metering run, its device and gas.
     mass_flow : (n,) array
         True flow. [kg/s]
     upstream, temperature : (n,) array
@@ -118,10 +118,10 @@ def signals_of(
         medium.dynamic_viscosity,
         medium.isentropic_exponent,
     )
-    shown = differential_pressure_of(period.plate, stream, mass_flow)
+    shown = differential_pressure_of(period.device, stream, mass_flow)
     felt = temperature
     if run.thermometer_downstream and period.gas is not None:
-        lost = pressure_loss(period.plate, stream, shown, mass_flow)
+        lost = pressure_loss(period.device, stream, shown, mass_flow)
         felt = temperature - period.gas.joule_thomson(absolute, temperature) * lost
     tapped = upstream - shown if run.pressure_downstream else upstream
     return Signals(shown, tapped, felt)
@@ -133,7 +133,7 @@ def rates_of(run: Run, period: Period, signals: Signals, atmosphere: Floats) -> 
     Parameters
     ----------
     run, period : Run, Period
-        The metering run, its plate and gas.
+        The metering run, its device and gas.
     signals : Signals
         Noise-free values, with or without calibration errors.
     atmosphere : (n,) array
@@ -160,9 +160,9 @@ def rates_of(run: Run, period: Period, signals: Signals, atmosphere: Floats) -> 
             run.medium.dynamic_viscosity,
             run.medium.isentropic_exponent,
         )
-        flow = mass_flow_of(period.plate, stream, counted)
+        flow = mass_flow_of(period.device, stream, counted)
         if downstream and period.gas is not None:
-            lost = pressure_loss(period.plate, stream, counted, flow)
+            lost = pressure_loss(period.device, stream, counted, flow)
             gained = period.gas.joule_thomson(absolute, upstream) * lost
             upstream = signals.temperature + gained
     return flow

@@ -15,13 +15,22 @@ from numpy.typing import NDArray
 from meterfix.demo import logs, sitefile
 from meterfix.demo.flaws import Flaws
 from meterfix.demo.rates import Signals, periods, rates_of
-from meterfix.demo.transmitters import BAROMETER_NOISE, DP, PRESSURE, TEMPERATURE
-from meterfix.demo.truth import Records, carried, totals
-from meterfix.demo.works import BAROMETER_INTERVAL_S, RUN_BY_NAME, Month, Run
+from meterfix.demo.transmitters import BAROMETER, REPEATABILITY
+from meterfix.demo.truth import Records, Sources, sources_of, totals
+from meterfix.demo.works import (
+    BAROMETER_INTERVAL_S,
+    DP,
+    PRESSURE,
+    RUN_BY_NAME,
+    TEMPERATURE,
+    Month,
+    Run,
+)
 from meterfix.model.calendar import SECOND
 
 Floats = NDArray[np.float64]
 Instants = NDArray[np.int64]
+Truths = NDArray[np.bool_]
 
 KINDS = (DP, PRESSURE, TEMPERATURE)
 
@@ -35,6 +44,8 @@ class RunLog:
     instants: Instants
     """What the logger stamps on the rows."""
     flaws: Flaws
+    written: Mapping[str, Truths]
+    """Kind of signal to whether it is logged at the knot at all."""
     mass_flow: Floats
     """True flow [kg/s]."""
     true: Mapping[str, Floats]
@@ -49,6 +60,18 @@ class RunLog:
     shown_atmosphere: Floats
     """Of the barometer, carried to the instants; without and with its calibration error."""
 
+    def good(self, kind: str) -> Truths:
+        """Return the knots at which a signal has a reading that counts."""
+        return self.written[kind] & self.flaws.shown(self.knots) & self.flaws.good(self.knots, kind)
+
+    def sources(self, kind: str, targets: Instants) -> tuple[Instants, Sources]:
+        """Return the rows of a signal's readings, and which of those serve other instants."""
+        rows = np.flatnonzero(self.good(kind))
+        carry = self.run.feed.carry(kind)
+        return rows, sources_of(
+            self.instants[rows], targets, linear=carry.linear, reach=carry.reach_s * SECOND
+        )
+
 
 @dataclass(frozen=True)
 class Simulated:
@@ -62,6 +85,8 @@ class Simulated:
     barometer: tuple[Instants, Floats, Floats]
     """Instants; true values; logged values before rounding [Pa]."""
     air_file_flaws: Flaws = field(default_factory=Flaws)
+    stray_lines: tuple[int, ...] = ()
+    """Instants of the historian's lines whose tag the site file does not know [UTC us]."""
 
     @property
     def meters(self) -> tuple[str, ...]:
@@ -95,20 +120,15 @@ class Simulated:
         """
         log = self.run_logs[meter]
         values = log.shown if calibrated else log.true
-        rows = log.flaws.shown(log.knots)
-        linear = log.run.feed.between == "linear"
-        reach = log.run.feed.maximum_gap_s * SECOND
-        counts = rows & log.flaws.good(log.knots, DP)
+        counts = log.good(DP)
         for out in self.month.out_of_service:
             if out.run == meter:
                 counts &= ~((log.instants >= out.start) & (log.instants < out.end))
         at = log.instants[counts]
         slow = {}
         for kind in (PRESSURE, TEMPERATURE):
-            good = rows & log.flaws.good(log.knots, kind)
-            slow[kind] = carried(
-                log.instants[good], values[kind][good], at, linear=linear, reach=reach
-            )
+            rows, sources = log.sources(kind, at)
+            slow[kind] = sources.of(values[kind][rows])
         whole = np.isfinite(slow[PRESSURE]) & np.isfinite(slow[TEMPERATURE])
         atmosphere = log.shown_atmosphere if calibrated else log.atmosphere
         return Records(
@@ -132,7 +152,7 @@ class Simulated:
         Returns
         -------
         pandas.DataFrame
-            Indexed by gas day: mass_kg, base_volume_m3, measured_time_s.
+            Indexed by gas day: mass_kg, base_volume_m3, energy_J (NaN for air), measured_time_s.
         """
         run = RUN_BY_NAME[meter]
         return totals(
@@ -196,25 +216,26 @@ class Simulated:
         log = self.run_logs[meter]
         records = self.records(meter, calibrated=True)
         flow = self.rates[meter]["calibrated_mass_flow_kg_per_s"].to_numpy()
-        rows = records.rows
+        mass = flow * float(run.feed.interval_s)
         shown = np.maximum(records.signals.differential_pressure, run.cut_off)
         absolute = records.signals.static_pressure + records.atmosphere
-        relative_dp = log.noise[DP][rows] / shown
-        variance = 0.25 * (
-            relative_dp**2
-            + (log.noise[PRESSURE][rows] / absolute) ** 2
-            + (log.noise[TEMPERATURE][rows] / records.signals.temperature) ** 2
-        )
+        relative_dp = log.noise[DP][records.rows] / shown
         shared = 0.5 * self._barometer_deviation / absolute
-        weight = float(run.feed.interval_s)
-        per_hour = BAROMETER_INTERVAL_S / weight
+        per_hour = BAROMETER_INTERVAL_S / run.feed.interval_s
         table = []
         for day in self.days:
             start, end = self.month.calendar.start(day), self.month.calendar.end(day)
             inside = (records.instants >= start) & (records.instants < end)
-            mass = flow[inside] * weight
-            square = float((mass**2 * (variance[inside] + shared[inside] ** 2 * per_hour)).sum())
-            bias = -float((mass * relative_dp[inside] ** 2).sum()) / 8.0
+            square = float(
+                ((0.5 * mass * relative_dp)[inside] ** 2).sum()
+                + ((mass * shared)[inside] ** 2).sum() * per_hour
+            )
+            for kind, by in (
+                (PRESSURE, 0.5 * mass / absolute),
+                (TEMPERATURE, 0.5 * mass / records.signals.temperature),
+            ):
+                square += _carried_variance(log, kind, records.instants[inside], by[inside])
+            bias = -float((mass * relative_dp**2)[inside].sum()) / 8.0
             density = periods(run, self.month, start, end)[0].base_density
             table.append([square**0.5, square**0.5 / density, bias])
         return pd.DataFrame(
@@ -226,7 +247,7 @@ class Simulated:
     @property
     def _barometer_deviation(self) -> float:
         noisy = any(log.noise[DP].any() for log in self.run_logs.values())
-        return BAROMETER_NOISE if noisy else 0.0
+        return REPEATABILITY[BAROMETER] if noisy else 0.0
 
     def write(self, folder: Path) -> Path:
         """Write the site file and the logs as they would lie at the works.
@@ -259,3 +280,15 @@ class Simulated:
     def site_text(self) -> str:
         """The site file."""
         return sitefile.site_text(self.month)
+
+
+def _carried_variance(log: RunLog, kind: str, instants: Instants, by: Floats) -> float:
+    """Return the variance that a signal's noise makes in the sum of `by` times its values.
+
+    A reading that serves many instants moves all of them.
+    """
+    rows, sources = log.sources(kind, instants)
+    moved = np.zeros(rows.size)
+    np.add.at(moved, sources.first, by * (1.0 - sources.share))
+    np.add.at(moved, sources.second, by * sources.share)
+    return float(((moved * log.noise[kind][rows]) ** 2).sum())

@@ -17,10 +17,7 @@ from meterfix.demo.rates import periods, signals_of
 from meterfix.demo.simulated import KINDS, RunLog, Simulated
 from meterfix.demo.transmitters import (
     BAROMETER,
-    BAROMETER_NOISE,
-    DP,
-    PRESSURE,
-    TEMPERATURE,
+    REPEATABILITY,
     draw_calibration,
     noise_deviation,
     writing_of,
@@ -28,9 +25,15 @@ from meterfix.demo.transmitters import (
 from meterfix.demo.works import (
     BAROMETER_INTERVAL_S,
     COMPRESSED_AIR,
+    DP,
     EXAMPLE_MONTH,
     EXAMPLE_SEED,
+    PRESSURE,
     RUNS,
+    TAG_DEAD_BAND_K,
+    TAG_PRESSURE_INTERVAL_S,
+    TAG_SNAPSHOT_S,
+    TEMPERATURE,
     Month,
     Run,
 )
@@ -38,6 +41,7 @@ from meterfix.model.calendar import SECOND
 
 Floats = NDArray[np.float64]
 Instants = NDArray[np.int64]
+Truths = NDArray[np.bool_]
 
 
 def simulate(
@@ -112,7 +116,8 @@ def simulate(
         )
         for run in RUNS
     }
-    return Simulated(seed, of, chosen, digits, run_logs, barometer, air_flaws)
+    stray = tuple(at for at in of.stray_lines if flaws and start <= at < end)
+    return Simulated(seed, of, chosen, digits, run_logs, barometer, air_flaws, stray)
 
 
 def _barometer(
@@ -124,7 +129,7 @@ def _barometer(
     if calibration:
         shown = draw_calibration(seed, BAROMETER, "001", 1.0).of(true)
     deviates = stream_of(seed, "noise BT-001").standard_normal(knots.size)
-    logged = shown + (BAROMETER_NOISE * deviates if noise else 0.0)
+    logged = shown + (REPEATABILITY[BAROMETER] * deviates if noise else 0.0)
     step = BAROMETER_INTERVAL_S * SECOND
     inside = (knots > start - step) & (knots < end + step)
     return (knots[inside], true[inside], logged[inside]), (knots, true, shown)
@@ -151,7 +156,15 @@ def _run_log(
     flaws = Flaws()
     if flawed:
         air = run.feed is COMPRESSED_AIR
-        flaws = draw_flaws(seed, month, all_knots, run.name, rows=0 if air else 3, cells=2)
+        flaws = draw_flaws(
+            seed,
+            month,
+            all_knots,
+            run.name,
+            rows=0 if air else 3,
+            cells=2,
+            tags=run.feed.tags,
+        )
         flaws = flaws.merged(air_flaws) if air else flaws
     instants = flaws.instants(knots)
     state = what_was.runs[run.name]
@@ -189,7 +202,7 @@ def _run_log(
         logged[kind] = shown[kind]
         if noise:
             deviates = stream_of(seed, f"noise {kind}-{run.number}").standard_normal(all_knots.size)
-            spread = noise_deviation(run, kind, true[kind])
+            spread = noise_deviation(run, kind)
             logged[kind] = shown[kind] + spread * deviates[inside]
             step = np.zeros(knots.size)
             if digits is None:
@@ -200,6 +213,7 @@ def _run_log(
         knots,
         instants,
         flaws,
+        _written(run, flaws, knots, true[TEMPERATURE]),
         flow,
         true,
         shown,
@@ -208,3 +222,31 @@ def _run_log(
         atmosphere,
         shown_atmosphere,
     )
+
+
+def _written(run: Run, flaws: Flaws, knots: Instants, temperature: Floats) -> dict[str, Truths]:
+    """Return at which knots each kind of signal is logged.
+
+    A historian writes the dp at every knot, the pressure every ten minutes, and the temperature
+    when it has left its dead band (which acts before the noise) and every half hour; and all of
+    them when it sees them again after a gap.
+    """
+    always = np.ones(knots.size, dtype=np.bool_)
+    if not run.feed.tags:
+        return dict.fromkeys(KINDS, always)
+    shown = flaws.shown(knots)
+    again = np.zeros(knots.size, dtype=np.bool_)
+    again[1:] = shown[1:] & ~shown[:-1]
+    snapshot = again | (knots % (TAG_SNAPSHOT_S * SECOND) == 0)
+    written = snapshot.copy()
+    last = float(temperature[0])
+    for n in np.flatnonzero(shown).tolist():
+        value = float(temperature[n])
+        if snapshot[n] or abs(value - last) > TAG_DEAD_BAND_K:
+            written[n] = True
+            last = value
+    return {
+        DP: always,
+        PRESSURE: again | (knots % (TAG_PRESSURE_INTERVAL_S * SECOND) == 0),
+        TEMPERATURE: written,
+    }

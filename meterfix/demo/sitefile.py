@@ -4,46 +4,55 @@ from __future__ import annotations
 
 from datetime import date
 
-from meterfix.demo.logs import air_header
-from meterfix.demo.plate import Plate
-from meterfix.demo.transmitters import DP, PRESSURE, TEMPERATURE
+from meterfix.demo.device import Device
+from meterfix.demo.flow import VENTURI_PRESSURE_LOSS
+from meterfix.demo.logs import air_header, tag_of
+from meterfix.demo.sitefile_sources import sources_text
+from meterfix.demo.transmitters import (
+    CALIBRATOR,
+    CALIBRATOR_SPAN,
+    REPEATABILITY,
+    STATED_ACCURACY,
+)
 from meterfix.demo.works import (
     AFTER,
     AIR,
     BALANCES,
     BEFORE,
     COMPRESSED_AIR,
-    KILN_CONTROL,
+    DP,
     NATURAL_GAS,
+    PRESSURE,
     RUNS,
     SITE_NAME,
-    SUPPLY,
+    TAG_DEAD_BAND_K,
+    TEMPERATURE,
     TIME_ZONE,
-    WORKS,
     ZERO_CELSIUS,
     ZONE,
-    Feed,
     Month,
     Run,
 )
 from meterfix.model.calendar import from_microseconds
 
-_CALORIFIC_VALUES = ("38.74 MJ/m3", "38.95 MJ/m3")
-"""Gross, 15 degC, of the two compositions, by hand from ISO 6976:2016, Tables 2 and 3."""
-
-_ISO_TIME = '["time"]\ntime_format = "%Y-%m-%dT%H:%M:%SZ"\ntime_zone = "UTC"'
-_BAD_VALUES = 'bad_values = { "BAD" = "transmitter fault", "-9999" = "no reading" }'
+_ANALYSIS = {
+    # component: repeatability of the chromatograph, its calibration gas; both [%] at k = 2
+    "methane": (0.06, 0.05),
+    "nitrogen": (0.02, -0.01),
+    "carbon_dioxide": (0.02, -0.01),
+    "ethane": (0.03, -0.02),
+    "propane": (0.015, -0.01),
+    "isobutane": (0.004, 0.0),
+    "n_butane": (0.004, 0.0),
+    "n_pentane": (0.003, 0.0),
+}
 
 
 def site_text(month: Month) -> str:
     """Return the site file of the works for a month; TOML, ending in a line end."""
     parts = [
         _head(month),
-        _run_source(SUPPLY, "dp", "the supply station's own loggers"),
-        _run_source(WORKS, "dp", "the works' loggers"),
-        _run_source(KILN_CONTROL, "q", "the shuttle kiln's controller takes the root itself"),
-        _air_source(),
-        _weather_source(),
+        sources_text(),
         "# --- Signals: one measuring point each "
         + "-" * 58
         + "\n\n"
@@ -51,6 +60,7 @@ def site_text(month: Month) -> str:
         _gases(month),
         "# --- Meters " + "-" * 85 + "\n\n" + "\n\n".join(_meter(run, month) for run in RUNS),
         "# --- Envelopes: in = out + vented + imbalance " + "-" * 51 + "\n\n" + _envelopes(),
+        "# --- Causes that several share " + "-" * 66 + "\n\n" + _shared_causes(),
     ]
     return "\n\n".join(parts) + "\n"
 
@@ -95,113 +105,42 @@ combustion_reference_temperature = "15 degC"
 # --- Logs {"-" * 87}"""
 
 
-def _gap(seconds: int) -> str:
-    return f'"{seconds // 60} min"'
+def _origin(run: Run, kind: str, header: str) -> str:
+    feed = run.feed
+    if feed.tags:
+        return f'[{{ source = "{feed.name}", tag = "{tag_of(kind, run)}" }}]'
+    if feed is COMPRESSED_AIR:
+        return f'[{{ source = "{feed.name}", column = "{air_header(kind, run.name)}" }}]'
+    return f'[{{ source = "{feed.name}", binding = "{run.name}", column = "{header}" }}]'
 
 
-def _run_source(feed: Feed, dp_header: str, comment: str) -> str:
-    if feed.dp_unit == "%":
-        dp_lines = 'unit = "%"\nroot = "taken"                         # % of full-scale flow'
-    else:
-        dp_lines = f'unit = "{feed.dp_unit}"\nroot = "not_taken"'
-    return f"""\
-[source.{feed.name}]                        # {comment}
-folder = "logs/{feed.name}"
-files = "{{binding}}_*.csv.gz"
-delivery = "whole"
-stamp = "instant"
-between = "{feed.between}"
-maximum_gap = {_gap(feed.maximum_gap_s)}
-delimiter = ","
-decimal_mark = "."
-time_columns = {_ISO_TIME}
-final_line_end = "required"
-{_BAD_VALUES}
-
-[source.{feed.name}.column.{dp_header}]
-quantity = "differential_pressure"
-{dp_lines}
-
-[source.{feed.name}.column.p]
-quantity = "static_pressure"
-unit = "{feed.pressure_unit}"
-reference = "gauge"
-
-[source.{feed.name}.column.t]
-quantity = "temperature"
-unit = "degC\""""
-
-
-def _air_source() -> str:
-    feed = COMPRESSED_AIR
-    columns = []
-    for run in RUNS:
-        if run.feed is not feed:
-            continue
-        columns.append(
-            f"""\
-[source.{feed.name}.column."{air_header(DP, run.name)}"]
-quantity = "differential_pressure"
-unit = "{feed.dp_unit}"
-
-[source.{feed.name}.column."{air_header(PRESSURE, run.name)}"]
-quantity = "static_pressure"
-unit = "{feed.pressure_unit}"
-reference = "gauge"
-
-[source.{feed.name}.column."{air_header(TEMPERATURE, run.name)}"]
-quantity = "temperature"
-unit = "degC\""""
-        )
-    head = f"""\
-[source.{feed.name}]                # one file a day for all air meters, in local time
-folder = "logs/{feed.name}"
-files = "air_*.csv.gz"
-delivery = "whole"
-stamp = "instant"
-between = "{feed.between}"
-maximum_gap = {_gap(feed.maximum_gap_s)}
-delimiter = ";"
-decimal_mark = ","
-time_columns = ["date", "clock"]
-time_format = "%d.%m.%Y %H:%M:%S"
-time_zone = "{TIME_ZONE}"
-repeated_hour = "file_order"           # when clocks go back, the hour's first run comes first
-final_line_end = "required"
-{_BAD_VALUES}"""
-    return "\n\n".join([head, *columns])
-
-
-def _weather_source() -> str:
-    return f"""\
-[source.weather]                       # the barometer, hourly
-folder = "logs/weather"
-files = "barometer_*.csv"
-delivery = "whole"
-stamp = "instant"
-between = "linear"
-maximum_gap = "150 min"
-delimiter = ","
-decimal_mark = "."
-time_columns = {_ISO_TIME}
-final_line_end = "required"
-
-[source.weather.column.barometer]
-quantity = "barometric_pressure"
-unit = "hPa"
-
-[signal.BT-001]
-from = [{{ source = "weather", column = "barometer" }}]"""
+def _accuracy(run: Run, kind: str) -> list[str]:
+    """Return what is stated of a transmitter: the figures that its errors are drawn from."""
+    zero, span = STATED_ACCURACY[kind]
+    noise = REPEATABILITY[kind]
+    if kind == TEMPERATURE:
+        entries = [f'  {{ acts_on = "zero", size = "{zero:g} K", k = 2 }},']
+        if run.feed.tags:
+            entries.append(
+                f'  {{ acts_on = "zero", size = "{TAG_DEAD_BAND_K:g} K", '
+                f'distribution = "rectangular", name = "{kind}-{run.number} dead band" }},'
+            )
+        return [
+            f'repeatability = {{ size = "{noise:g} K", k = 1 }}',
+            "uncertainty = [",
+            *entries,
+            "]",
+        ]
+    return [
+        f'repeatability = {{ size = "{noise * 100.0:g} % of span", k = 1 }}',
+        "uncertainty = [",
+        f'  {{ acts_on = "zero", size = "{zero * 100.0:g} % of span", k = 2 }},',
+        f'  {{ acts_on = "span", size = "{span * 100.0:g} % of reading", k = 2 }},',
+        "]",
+    ]
 
 
 def _signals(run: Run, month: Month) -> str:
-    feed = run.feed
-
-    def origin(kind: str, header: str) -> str:
-        if feed is COMPRESSED_AIR:
-            return f'[{{ source = "{feed.name}", column = "{air_header(kind, run.name)}" }}]'
-        return f'[{{ source = "{feed.name}", binding = "{run.name}", column = "{header}" }}]'
-
     excluded = [
         f'  {{ from = "{_instant(out.start)}", to = "{_instant(out.end)}", '
         f'reason = "{out.reason}" }},'
@@ -210,21 +149,24 @@ def _signals(run: Run, month: Month) -> str:
     ]
     lines = [
         f"[signal.PDT-{run.number}]",
-        f"from = {origin(DP, 'q' if feed.dp_unit == '%' else 'dp')}",
+        f"from = {_origin(run, DP, 'q' if run.feed.dp_unit == '%' else 'dp')}",
         f'range = ["0 mbar", "{run.dp_range / 100.0:g} mbar"]',
     ]
     if excluded:
         lines += ["excluded = [", *excluded, "]"]
     low, high = (kelvin - ZERO_CELSIUS for kelvin in run.temperature_range)
     lines += [
+        *_accuracy(run, DP),
         "",
         f"[signal.PT-{run.number}]",
-        f"from = {origin(PRESSURE, 'p')}",
+        f"from = {_origin(run, PRESSURE, 'p')}",
         f'range = ["0 bar", "{run.pressure_range / 1e5:g} bar"]',
+        *_accuracy(run, PRESSURE),
         "",
         f"[signal.TT-{run.number}]",
-        f"from = {origin(TEMPERATURE, 't')}",
+        f"from = {_origin(run, TEMPERATURE, 't')}",
         f'range = ["{low:g} degC", "{high:g} degC"]',
+        *_accuracy(run, TEMPERATURE),
     ]
     return "\n".join(lines)
 
@@ -238,21 +180,9 @@ def _composition(fractions: dict[str, float], since: str) -> str:
     return "\n".join(lines)
 
 
-def _calorific(value: str, since: str) -> str:
-    lines = ["[[gas.natural_gas.calorific_value]]"]
-    if since:
-        lines.append(f'since = "{since}"')
-    lines += [
-        f'value = "{value}"',
-        'kind = "gross"',
-        'combustion_reference_temperature = "15 degC"',
-        'volume_base = { pressure = "101.325 kPa", temperature = "15 degC" }',
-    ]
-    return "\n".join(lines)
-
-
 def _gases(month: Month) -> str:
     change = _instant(month.composition_change)
+    analysed = "\n".join(f"{name} = {own:g}" for name, (own, _) in _ANALYSIS.items())
     return f"""\
 # --- Gases {"-" * 86}
 
@@ -261,12 +191,21 @@ line_model = "aga8_detail"
 base_model = "aga8_detail"
 dynamic_viscosity = "{NATURAL_GAS.dynamic_viscosity * 1e3:.4f} mPa s"
 isentropic_exponent = {NATURAL_GAS.isentropic_exponent}
+dynamic_viscosity_uncertainty = {{ size = "5 %", k = 2 }}
+isentropic_exponent_uncertainty = {{ size = "1.5 %", k = 2 }}
 
-{_calorific(_CALORIFIC_VALUES[0], "")}
-
-{_calorific(_CALORIFIC_VALUES[1], change)}
+[gas.natural_gas.calorific_value]      # from the composition, whenever that changes
+method = "ISO 6976:2016"
+basis = "volume"
+kind = "gross"
+combustion_reference_temperature = "15 degC"
+volume_base = {{ pressure = "101.325 kPa", temperature = "15 degC" }}
 
 {_composition(BEFORE, "")}
+
+[gas.natural_gas.composition.uncertainty] # the chromatograph's repeatability, of both compositions
+k = 2
+{analysed}
 
 {_composition(AFTER, change)}
 
@@ -275,6 +214,8 @@ line_model = "reference_equation"
 base_model = "reference_equation"
 dynamic_viscosity = "{AIR.dynamic_viscosity * 1e3:.4f} mPa s"
 isentropic_exponent = {AIR.isentropic_exponent}
+dynamic_viscosity_uncertainty = {{ size = "3 %", k = 2 }}
+isentropic_exponent_uncertainty = {{ size = "0.5 %", k = 2 }}
 
 [[gas.compressed_air.composition]]
 basis = "mole"
@@ -283,32 +224,64 @@ air = 100.0"""
 
 
 def _meter(run: Run, month: Month) -> str:
-    plate: Plate = run.plate
-    text = f"""\
-[meter.{run.name}]
-description = "{run.description}"
-gas = "{run.medium.name}"
-differential_pressure = "PDT-{run.number}"
-static_pressure = "PT-{run.number}"
-temperature = "TT-{run.number}"
-static_pressure_tapping = "{"downstream" if run.pressure_downstream else "upstream"}"
-thermometer = "{"downstream" if run.thermometer_downstream else "upstream"}"
-low_flow_cut_off = "{run.cut_off / 100.0:g} mbar"
+    device = run.device
+    lines = [
+        f"[meter.{run.name}]",
+        f'description = "{run.description}"',
+        f'gas = "{run.medium.name}"',
+        f'differential_pressure = "PDT-{run.number}"',
+        f'static_pressure = "PT-{run.number}"',
+        f'temperature = "TT-{run.number}"',
+        f'static_pressure_tapping = "{"downstream" if run.pressure_downstream else "upstream"}"',
+        f'thermometer = "{"downstream" if run.thermometer_downstream else "upstream"}"',
+        f'low_flow_cut_off = "{run.cut_off / 100.0:g} mbar"',
+        "",
+        f"[meter.{run.name}.{device.family}]",
+        *_device(device),
+    ]
+    if run.spare is not None:
+        lines += [
+            "",
+            f"[[meter.{run.name}.change]]                # the tube gave way to its spare",
+            f'since = "{_instant(month.tube_exchange)}"',
+            _spare(device.family, run.spare),
+        ]
+    return "\n".join(lines)
 
-[meter.{run.name}.orifice]
-tappings = "{plate.tappings}"
-bore = "{plate.bore * 1e3:.3f} mm"
-pipe_diameter = "{plate.pipe_diameter * 1e3:.3f} mm"
-bore_expansion = "{plate.bore_expansion * 1e6:g}e-6 / K"
-pipe_expansion = "{plate.pipe_expansion * 1e6:g}e-6 / K"
-reference_temperature = "{plate.reference_temperature - ZERO_CELSIUS:g} degC\""""
-    if run.new_bore is not None:
-        text += f"""
 
-[[meter.{run.name}.change]]                # the plate was exchanged
-since = "{_instant(month.plate_exchange)}"
-orifice = {{ bore = "{run.new_bore * 1e3:.3f} mm" }}"""
-    return text
+def _spare(family: str, device: Device) -> str:
+    return f'{family} = {{ serial = "{device.serial}", bore = "{_mm(device.bore)}" }}'
+
+
+def _mm(length: float) -> str:
+    return f"{length * 1e3:.3f} mm"
+
+
+def _device(device: Device) -> list[str]:
+    lines = [
+        f'{"tappings" if device.family == "orifice" else "form"} = "{device.form}"',
+        f'bore = "{_mm(device.bore)}"',
+        f'pipe_diameter = "{_mm(device.pipe_diameter)}"',
+        'bore_uncertainty = { size = "0.05 %", k = 2 }',
+        'pipe_diameter_uncertainty = { size = "0.2 %", k = 2 }',
+        f'bore_expansion = "{device.bore_expansion * 1e6:g}e-6 / K"',
+        f'pipe_expansion = "{device.pipe_expansion * 1e6:g}e-6 / K"',
+        f'reference_temperature = "{device.reference_temperature - ZERO_CELSIUS:g} degC"',
+    ]
+    if device.serial:
+        lines.insert(0, f'serial = "{device.serial}"')
+    if device.family == "venturi_tube":
+        lines.append(f'pressure_loss = "{VENTURI_PRESSURE_LOSS * 100.0:g} %"')
+    certificate = device.certificate
+    if certificate is not None:
+        low, high = certificate.reynolds_number
+        lines.append(
+            f"discharge_coefficient = {{ value = {certificate.discharge_coefficient:.4f}, "
+            f'certificate = "{certificate.number}", '
+            f'uncertainty = {{ size = "{certificate.uncertainty}", k = 2 }}, '
+            f"reynolds_number = [{low:g}, {high:g}] }}"
+        )
+    return lines
 
 
 def _envelopes() -> str:
@@ -325,4 +298,36 @@ vented = []
 quantities = {names(balance.quantities)}
 tolerance = "1.5 %\""""
         for balance in BALANCES
+    )
+
+
+def _shared_causes() -> str:
+    set_with_it = [
+        f'  {{ signal = "{kind}-{run.number}", acts_on = "span", '
+        f'size = "{CALIBRATOR_SPAN[kind] * 100.0:g} % of reading" }},'
+        for run in RUNS
+        for kind in (DP, PRESSURE)
+    ]
+    calibration_gas = [
+        f'  {{ gas = "natural_gas", component = "{name}", acts_on = "fraction", '
+        f'size = "{shared:g} %" }},'
+        for name, (_, shared) in _ANALYSIS.items()
+        if shared
+    ]
+    return "\n".join(
+        (
+            f'[uncertainty."{CALIBRATOR}"]',
+            'kind = "calibration device"',
+            "k = 2",
+            "part = [",
+            *set_with_it,
+            "]",
+            "",
+            '[uncertainty."chromatograph GC-1, calibration gas"]',
+            'kind = "chromatograph"',
+            "k = 2",
+            "part = [",
+            *calibration_gas,
+            "]",
+        )
     )

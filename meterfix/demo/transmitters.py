@@ -13,19 +13,25 @@ import numpy as np
 from numpy.typing import NDArray
 
 from meterfix.demo.loads import stream_of
-from meterfix.demo.works import ZERO_CELSIUS, Run
+from meterfix.demo.works import DP, PRESSURE, TEMPERATURE, ZERO_CELSIUS, Run
 
 Floats = NDArray[np.float64]
 
-DP, PRESSURE, TEMPERATURE, BAROMETER = "PDT", "PT", "TT", "BT"
+BAROMETER = "BT"
 
-_STATED_ACCURACY = {
-    # (zero [fraction of the range; Pa for BT, K for TT], span [-]), both as k = 2 limits
+STATED_ACCURACY = {
+    # (zero [fraction of the range; Pa for BT, K for TT], span [-]), both at k = 2
     DP: (0.0006, 0.0008),
     PRESSURE: (0.0008, 0.0008),
     TEMPERATURE: (0.25, 0.0),
     BAROMETER: (40.0, 0.0),
 }
+CALIBRATOR = "pressure calibrator PC-1"
+CALIBRATOR_SPAN = {DP: 0.0002, PRESSURE: 0.0003}
+"""What the one calibrator that all were set with may be off, of the reading at k = 2."""
+
+REPEATABILITY = {DP: 8e-4, PRESSURE: 2e-4, TEMPERATURE: 0.03, BAROMETER: 6.0}
+"""Standard deviation of the noise: of the span for DP and PT; K for TT, Pa for BT."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,7 +48,7 @@ class Calibration:
 
 
 def draw_calibration(seed: int, kind: str, number: str, full_scale: float) -> Calibration:
-    """Draw one transmitter's calibration errors within its stated accuracy.
+    """Draw one transmitter's calibration errors from its stated accuracy.
 
     Parameters
     ----------
@@ -56,28 +62,23 @@ def draw_calibration(seed: int, kind: str, number: str, full_scale: float) -> Ca
     Returns
     -------
     Calibration
-        Normal deviates with half the stated limit as standard deviation, cut at the limit.
+        Normal deviates of its own with half the stated figures as standard deviation, and on
+        the span the calibrator's, which is the same for all.
     """
-    zero_limit, span_limit = _STATED_ACCURACY[kind]
-    rng = stream_of(seed, f"calibration {kind}-{number}")
-    zero, span = np.clip(rng.standard_normal(2) / 2.0, -1.0, 1.0).tolist()
-    return Calibration(zero * zero_limit * full_scale, span * span_limit)
+    zero_stated, span_stated = STATED_ACCURACY[kind]
+    own = stream_of(seed, f"calibration {kind}-{number}")
+    zero, span = (own.standard_normal(2) / 2.0).tolist()
+    shared = float(stream_of(seed, CALIBRATOR).standard_normal()) / 2.0
+    return Calibration(
+        zero * zero_stated * full_scale,
+        span * span_stated + shared * CALIBRATOR_SPAN.get(kind, 0.0),
+    )
 
 
-def noise_deviation(run: Run, kind: str, values: Floats) -> Floats:
-    """Return the standard deviation of the noise on each value, SI.
-
-    Turbulence makes the dp's noise grow with the dp; the rest is the electronics'.
-    """
-    if kind == DP:
-        return 0.005 * np.abs(values) + 4e-5 * run.dp_range
-    if kind == PRESSURE:
-        return np.full_like(values, 2e-4 * run.pressure_range)
-    return np.full_like(values, 0.03)
-
-
-BAROMETER_NOISE = 6.0
-"""Standard deviation of the barometer's noise [Pa]."""
+def noise_deviation(run: Run, kind: str) -> float:
+    """Return the standard deviation of the noise on each value, SI."""
+    full_scale = {DP: run.dp_range, PRESSURE: run.pressure_range, TEMPERATURE: 1.0}
+    return REPEATABILITY[kind] * full_scale[kind]
 
 
 @dataclass(frozen=True, slots=True)

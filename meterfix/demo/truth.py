@@ -3,7 +3,7 @@
 The rule: a rate exists at every instant with a dp that counts (not lost, not excluded) and a
 pressure and temperature that reach it. `linear`: rates run linearly between such instants no
 further apart than `maximum_gap`; `hold`: a rate holds to the next one. All other time is
-missing. Plate and gas stand still within a period, and at a period's edge each side uses its
+missing. Device and gas stand still within a period, and at a period's edge each side uses its
 own.
 """
 
@@ -49,15 +49,31 @@ class Records:
         return Records(self.instants[cut], signals, self.atmosphere[cut], self.rows[cut])
 
 
-def carried(
-    instants: Instants, values: Floats, targets: Instants, *, linear: bool, reach: int
-) -> Floats:
-    """Return a signal's values at other instants, by its own rule.
+@dataclass(frozen=True, slots=True)
+class Sources:
+    """The readings behind a carried value; (m,) arrays of indices and shares."""
+
+    used: Truths
+    """False where the rule gives nothing."""
+    first: NDArray[np.int64]
+    second: NDArray[np.int64]
+    share: Floats
+    """Of the second reading in the value."""
+
+    def of(self, values: Floats) -> Floats:
+        """Return the carried values; NaN where the rule gives nothing."""
+        first = values[self.first]
+        between = first + self.share * (values[self.second] - first)
+        return np.where(self.used, np.where(self.share > 0.0, between, first), np.nan)
+
+
+def sources_of(instants: Instants, targets: Instants, *, linear: bool, reach: int) -> Sources:
+    """Return which of a signal's readings serve other instants, by its own rule.
 
     Parameters
     ----------
-    instants, values : (n,) array
-        The signal's good readings in order of time. [UTC us]
+    instants : (n,) array
+        Of the signal's good readings, in order of time. [UTC us]
     targets : (m,) array
         Where values are wanted. [UTC us]
     linear : bool
@@ -67,22 +83,41 @@ def carried(
 
     Returns
     -------
-    (m,) array
-        NaN where the rule gives nothing.
+    Sources
+        (m,) arrays.
     """
     before = np.searchsorted(instants, targets, side="right") - 1
     exists = before >= 0
     before = np.maximum(before, 0)
-    exact = exists & (instants[before] == targets)
+    age = targets - instants[before]
     if not linear:
-        near = exists & (targets - instants[before] <= reach)
-        return np.where(near, values[before], np.nan)
+        return Sources(exists & (age <= reach), before, before, np.zeros(targets.size))
     after = np.minimum(before + 1, instants.size - 1)
     width = instants[after] - instants[before]
-    bridged = exists & (width > 0) & (width <= reach)
-    share = (targets - instants[before]) / np.where(width > 0, width, 1)
-    between = values[before] + share * (values[after] - values[before])
-    return np.where(exact, values[before], np.where(bridged, between, np.nan))
+    exact = exists & (age == 0)
+    bridged = exists & ~exact & (width > 0) & (width <= reach)
+    share = np.where(bridged, age / np.where(width > 0, width, 1), 0.0)
+    return Sources(exact | bridged, before, after, share)
+
+
+def carried(
+    instants: Instants, values: Floats, targets: Instants, *, linear: bool, reach: int
+) -> Floats:
+    """Return a signal's values at other instants, by its own rule.
+
+    Parameters
+    ----------
+    instants, values : (n,) array
+        The signal's good readings in order of time. [UTC us]
+    targets, linear, reach
+        As of `sources_of`.
+
+    Returns
+    -------
+    (m,) array
+        NaN where the rule gives nothing.
+    """
+    return sources_of(instants, targets, linear=linear, reach=reach).of(values)
 
 
 def integrate(
@@ -127,7 +162,7 @@ def totals(
     calendar: GasDayCalendar,
     days: tuple[date, ...],
 ) -> pd.DataFrame:
-    """Return mass and base volume per gas day from the simulator's own rates.
+    """Return mass, base volume and energy per gas day from the simulator's own rates.
 
     Parameters
     ----------
@@ -143,11 +178,11 @@ def totals(
     Returns
     -------
     pandas.DataFrame
-        Indexed by gas day: mass_kg, base_volume_m3, measured_time_s.
+        Indexed by gas day: mass_kg, base_volume_m3, energy_J (NaN for air), measured_time_s.
     """
     linear = run.feed.between == "linear"
     gap = run.feed.maximum_gap_s * SECOND
-    sums: dict[date, list[tuple[float, float, float]]] = {day: [] for day in days}
+    sums: dict[date, list[tuple[float, float, float, float]]] = {day: [] for day in days}
     for period in run_periods:
         part = records.part(period.start, period.end)
         if not part.instants.size:
@@ -159,10 +194,11 @@ def totals(
             if start >= end:
                 continue
             mass, time = integrate(part.instants, rates, start, end, linear=linear, maximum_gap=gap)
-            sums[day].append((mass, mass / period.base_density, time))
+            volume = mass / period.base_density
+            sums[day].append((mass, volume, volume * period.calorific_value, time))
     rows = [[math.fsum(column) for column in zip(*sums[day], strict=True)] for day in days]
     return pd.DataFrame(
         rows,
         index=pd.Index(list(days), name="gas_day"),
-        columns=["mass_kg", "base_volume_m3", "measured_time_s"],
+        columns=["mass_kg", "base_volume_m3", "energy_J", "measured_time_s"],
     )

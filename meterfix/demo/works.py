@@ -1,4 +1,4 @@
-"""The invented works: its pipes, plates, transmitters and gases, and what happens in its month.
+"""The invented works: its pipes, devices, transmitters and gases, and what happens in its month.
 
 Everything here is made up. Instants are given by day of the month and local clock, so that the
 same works can be simulated in any month.
@@ -6,11 +6,11 @@ same works can be simulated in any month.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import date, datetime
 from zoneinfo import ZoneInfo
 
-from meterfix.demo.plate import Plate
+from meterfix.demo.device import Certificate, Device
 from meterfix.model.calendar import GasDayCalendar, to_microseconds
 from meterfix.model.versions import always
 
@@ -65,6 +65,19 @@ NATURAL_GAS = Medium("natural_gas", 0.0111e-3, 1.29)
 AIR = Medium("compressed_air", 0.0184e-3, 1.402)
 
 
+DP, PRESSURE, TEMPERATURE = "PDT", "PT", "TT"
+"""The kinds of a run's signals."""
+
+
+@dataclass(frozen=True, slots=True)
+class Carry:
+    """How a signal's readings reach the instants of dp."""
+
+    linear: bool
+    """Between neighbours no further apart than `reach_s`; else held for at most that long."""
+    reach_s: int
+
+
 @dataclass(frozen=True, slots=True)
 class Feed:
     """A source of logs: how often it writes, in what units, and how values run between rows."""
@@ -76,81 +89,108 @@ class Feed:
     dp_unit: str
     between: str
     maximum_gap_s: int
+    tags: bool = False
+    """True: a row per tag and time, the tags at rates of their own; else a row per time."""
 
+    def carry(self, kind: str) -> Carry:
+        """Return how a pressure or temperature reaches the instants of dp."""
+        if not self.tags:
+            return Carry(self.between == "linear", self.maximum_gap_s)
+        if kind == PRESSURE:
+            return Carry(linear=True, reach_s=TAG_PRESSURE_GAP_S)
+        return Carry(linear=False, reach_s=TAG_SILENCE_S)
+
+
+TAG_PRESSURE_INTERVAL_S = 600
+TAG_PRESSURE_GAP_S = 1500
+"""One lost reading is bridged."""
+TAG_SNAPSHOT_S = 1800
+"""How often a temperature is written that has not left its dead band."""
+TAG_DEAD_BAND_K = 0.1
+TAG_SILENCE_S = 3600
 
 SUPPLY = Feed("supply", 120, "bar", "mbar", "linear", 300)
 WORKS = Feed("works", 120, "kPa", "kPa", "linear", 300)
 KILN_CONTROL = Feed("kiln_control", 120, "bar", "%", "linear", 300)
+HISTORIAN = Feed("historian", 120, "bar", "mbar", "linear", 300, tags=True)
 COMPRESSED_AIR = Feed("compressed_air", 60, "bar", "mbar", "hold", 300)
-FEEDS = (SUPPLY, WORKS, KILN_CONTROL, COMPRESSED_AIR)
+FEEDS = (SUPPLY, WORKS, KILN_CONTROL, HISTORIAN, COMPRESSED_AIR)
+
+STRAY_TAG = "TT-204.PV"
+"""A tag that somebody has added to the historian's export, and nobody to the site file."""
 
 
 @dataclass(frozen=True, slots=True)
 class Run:
-    """A metering run: plate, tappings, transmitters. Ranges [Pa], gauge for pressure; [K]."""
+    """A metering run: device, transmitters. Ranges [Pa], gauge for pressure; [K]."""
 
     name: str
     number: str
     description: str
     feed: Feed
     medium: Medium
-    plate: Plate
+    device: Device
     dp_range: float
     pressure_range: float
     cut_off: float
     pressure_downstream: bool = False
     thermometer_downstream: bool = False
     temperature_range: tuple[float, float] = field(default=(253.15, 333.15))
-    new_bore: float | None = None
-    """Bore after the plate exchange, if this run has one [m]."""
+    spare: Device | None = None
+    """The device after the exchange, if this run has one."""
 
+
+_TUBE = Device(48.470e-3, 102.26e-3, "machined", serial="VT-1")
 
 RUNS: tuple[Run, ...] = (
     Run(
         "FT-101", "101", "gas supply, run A", SUPPLY, NATURAL_GAS,
-        Plate(54.118e-3, 154.08e-3, "flange"), 16e3, 25e5, 100.0, thermometer_downstream=True,
+        Device(54.118e-3, 154.08e-3, "flange"), 16e3, 25e5, 100.0, thermometer_downstream=True,
     ),
     Run(
         "FT-102", "102", "gas supply, run B (shut at weekends)", SUPPLY, NATURAL_GAS,
-        Plate(53.904e-3, 154.11e-3, "flange"), 16e3, 25e5, 100.0, thermometer_downstream=True,
+        Device(53.904e-3, 154.11e-3, "flange"), 16e3, 25e5, 100.0, thermometer_downstream=True,
     ),
     Run(
-        "FT-201", "201", "spray dryer", WORKS, NATURAL_GAS,
-        Plate(62.30e-3, 102.26e-3, "D_and_D/2"), 16e3, 6e5, 80.0,
-        thermometer_downstream=True, new_bore=62.27e-3,
+        "FT-201", "201", "spray dryer", HISTORIAN, NATURAL_GAS,
+        _TUBE, 16e3, 6e5, 80.0,
+        thermometer_downstream=True, spare=replace(_TUBE, bore=48.520e-3, serial="VT-2"),
     ),
     Run(
         "FT-202", "202", "kiln hall, main", WORKS, NATURAL_GAS,
-        Plate(70.06e-3, 128.20e-3, "corner"), 10e3, 6e5, 100.0,
+        Device(70.06e-3, 128.20e-3, "corner"), 10e3, 6e5, 100.0,
     ),
     Run(
-        "FT-203", "203", "boiler house", WORKS, NATURAL_GAS,
-        Plate(44.02e-3, 77.93e-3, "flange"), 10e3, 6e5, 60.0,
+        "FT-203", "203", "boiler house", HISTORIAN, NATURAL_GAS,
+        Device(35.60e-3, 77.93e-3, "ISA_1932"), 10e3, 6e5, 60.0,
         pressure_downstream=True, thermometer_downstream=True,
     ),
     Run(
         "FT-301", "301", "roller kiln", WORKS, NATURAL_GAS,
-        Plate(54.00e-3, 102.26e-3, "corner"), 6e3, 4e5, 50.0, thermometer_downstream=True,
+        Device(42.60e-3, 102.26e-3, "long_radius"), 6e3, 4e5, 50.0, thermometer_downstream=True,
     ),
     Run(
         "FT-302", "302", "shuttle kiln (batches)", KILN_CONTROL, NATURAL_GAS,
-        Plate(46.03e-3, 77.93e-3, "D_and_D/2"), 12.5e3, 4e5, 60.0,
+        Device(46.03e-3, 77.93e-3, "D_and_D/2"), 12.5e3, 4e5, 60.0,
     ),
     Run(
         "FT-303", "303", "tile dryers", WORKS, NATURAL_GAS,
-        Plate(38.01e-3, 77.93e-3, "flange"), 10e3, 4e5, 50.0,
+        Device(
+            38.01e-3, 77.93e-3, "flange",
+            certificate=Certificate("C-303/26", 0.6043, "0.25 %", (4e4, 2.5e5)),
+        ), 10e3, 4e5, 50.0,
     ),
     Run(
         "FA-401", "401", "compressed air, main", COMPRESSED_AIR, AIR,
-        Plate(38.00e-3, 82.80e-3, "flange"), 16e3, 10e5, 100.0,
+        Device(38.00e-3, 82.80e-3, "flange"), 16e3, 10e5, 100.0,
     ),
     Run(
         "FA-411", "411", "compressed air, press shop", COMPRESSED_AIR, AIR,
-        Plate(30.02e-3, 54.50e-3, "corner"), 16e3, 10e5, 100.0,
+        Device(30.02e-3, 54.50e-3, "corner"), 16e3, 10e5, 100.0,
     ),
     Run(
         "FA-412", "412", "compressed air, glaze line", COMPRESSED_AIR, AIR,
-        Plate(28.01e-3, 54.50e-3, "corner"), 10e3, 10e5, 100.0,
+        Device(24.50e-3, 54.50e-3, "ISA_1932"), 10e3, 10e5, 100.0,
     ),
 )  # fmt: skip
 
@@ -231,13 +271,13 @@ class Month:
         return self.calendar.start(self.first_day.replace(day=COMPOSITION_CHANGE_DAY))
 
     @property
-    def plate_exchange(self) -> int:
-        """When FT-201's new plate counts, inside the isolation for it."""
+    def tube_exchange(self) -> int:
+        """When FT-201's spare Venturi tube counts, inside the isolation for it."""
         return self.at(20, 9, 30)
 
     @property
     def standstill(self) -> tuple[int, int]:
-        """While the spray dryer stands for the plate exchange."""
+        """While the spray dryer stands for the exchange of its Venturi tube."""
         return self.at(20, 8, 30), self.at(20, 10, 30)
 
     @property
@@ -245,7 +285,7 @@ class Month:
         """The excluded intervals, off the loggers' two-minute grid as clocks on walls are."""
         return (
             OutOfService("FT-101", self.at(14, 8, 1), self.at(14, 8, 41), "zero check"),
-            OutOfService("FT-201", self.at(20, 9, 1), self.at(20, 10, 1), "plate exchanged"),
+            OutOfService("FT-201", self.at(20, 9, 1), self.at(20, 10, 1), "Venturi tube exchanged"),
         )
 
     @property
@@ -258,5 +298,10 @@ class Month:
 
     @property
     def outage(self) -> tuple[int, int]:
-        """FT-203's logger without power: last row before, first row after."""
-        return self.at(22, 11, 2), self.at(22, 11, 34)
+        """FT-203 cut off from the historian: last rows before, first rows after."""
+        return self.at(22, 11, 0), self.at(22, 11, 34)
+
+    @property
+    def stray_lines(self) -> tuple[int, ...]:
+        """When the historian's export holds `STRAY_TAG`."""
+        return tuple(self.at(9, 10, minute) for minute in range(0, 60, 10))

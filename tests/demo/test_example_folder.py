@@ -5,9 +5,11 @@ import tomllib
 from datetime import UTC, date, datetime
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from meterfix.demo.build import build, main
+from meterfix.demo.calorific import gross_calorific_value
 from meterfix.demo.example import EXAMPLE_NOW, lay, packaged_site
 from meterfix.demo.logs import files_of
 from meterfix.demo.simulator import simulate
@@ -25,8 +27,8 @@ def _unpacked(content):
 def test_the_stored_logs_are_small():
     """All of sample_logs is under 5 MB, and every file of it is a log."""
     stored = [path for path in SAMPLE.rglob("*") if path.is_file()]
-    assert len(stored) > 300
-    assert sum(path.stat().st_size for path in stored) < 5_000_000
+    assert len(stored) > 280
+    assert sum(path.stat().st_size for path in stored) < 3_500_000
     assert all(path.name.endswith((".csv", ".csv.gz")) for path in stored)
 
 
@@ -41,7 +43,7 @@ def test_a_rebuilt_day_is_the_stored_one():
         if name.split(".")[0].endswith("2026-10-08"):
             assert _unpacked(content) == _unpacked((SAMPLE / name).read_bytes()), name
             compared += 1
-    assert compared == 10
+    assert compared == 9
 
 
 def test_compressed_logs_hold_no_time_and_no_name(example_files):
@@ -62,45 +64,54 @@ def test_local_times_run_through_the_repeated_hour(example_files):
 
 
 def test_the_site_file_states_the_works(example_month):
-    """Bores, pipes, compositions and cut-offs of the site file are those simulated."""
+    """Devices, compositions, cut-offs and noise of the site file are those simulated."""
     site = tomllib.loads(example_month.site_text)
     for run in RUNS:
         meter = site["meter"][run.name]
-        assert float(meter["orifice"]["bore"].removesuffix(" mm")) == pytest.approx(
-            run.plate.bore * 1e3, rel=1e-12
+        device = meter[run.device.family]
+        assert run.device.form in {device.get("tappings"), device.get("form")}
+        assert float(device["bore"].removesuffix(" mm")) == pytest.approx(
+            run.device.bore * 1e3, rel=1e-12
         )
-        assert float(meter["orifice"]["pipe_diameter"].removesuffix(" mm")) == pytest.approx(
-            run.plate.pipe_diameter * 1e3, rel=1e-12
+        assert float(device["pipe_diameter"].removesuffix(" mm")) == pytest.approx(
+            run.device.pipe_diameter * 1e3, rel=1e-12
         )
+        if run.device.certificate is not None:
+            assert (
+                device["discharge_coefficient"]["value"]
+                == run.device.certificate.discharge_coefficient
+            )
+        noise = site["signal"][f"PDT-{run.number}"]["repeatability"]
+        assert noise["k"] == 1
+        share = float(noise["size"].removesuffix(" % of span")) / 100.0
+        log = example_month.run_logs[run.name]
+        quiet = log.logged["PDT"] - log.shown["PDT"]
+        assert share * run.dp_range == pytest.approx(float(np.std(quiet)), rel=0.03)
         assert float(meter["low_flow_cut_off"].removesuffix(" mbar")) * 100.0 == run.cut_off
     for composition in site["gas"]["natural_gas"]["composition"]:
         parts = [x for x in composition.values() if isinstance(x, float)]
         assert sum(parts) == pytest.approx(100.0, abs=1e-9)
 
 
-def test_the_calorific_values_are_those_of_the_compositions(example_month):
-    """Stated values: ISO 6976:2016, Tables 2 and 3 (15 degC, 15 degC), to their last digit.
+def test_the_gases_calorific_values_are_those_of_the_standard():
+    """By hand from ISO 6976:2016, Tables 2 and 3 (15 degC, 15 degC), with the figures for pure gas.
 
-    Molar gross calorific values [kJ/mol] and summation factors at 15 degC, by component.
+    Pure methane: 37.71 MJ/m3 (891.51 kJ/mol over 23.6448e-3 m3/mol and Z = 0.998018).
     """
-    table = {
-        "methane": (891.51, 0.04452), "ethane": (1562.14, 0.0919), "propane": (2221.10, 0.1338),
-        "isobutane": (2870.58, 0.1789), "n_butane": (2879.76, 0.1871),
-        "n_pentane": (3538.60, 0.2478), "nitrogen": (0.0, 0.0170), "carbon_dioxide": (0.0, 0.0752),
-    }  # fmt: skip
-    gas = tomllib.loads(example_month.site_text)["gas"]["natural_gas"]
-    for composition, stated in zip(gas["composition"], gas["calorific_value"], strict=True):
-        x = {name: composition[name] / 100.0 for name in table}
-        molar = sum(x[name] * table[name][0] for name in table)
-        factor = 1.0 - sum(x[name] * table[name][1] for name in table) ** 2
-        value = molar * 101.325 / (8.3144621 * 288.15 * factor)
-        assert float(stated["value"].removesuffix(" MJ/m3")) == pytest.approx(value, abs=0.006)
+    molar_volume = 8.3144621 * 288.15 / 101_325.0
+    assert gross_calorific_value({"methane": 1.0}) == pytest.approx(
+        891.51e3 / (molar_volume * (1.0 - 0.04452**2)), rel=1e-14
+    )
+    mixed = {"methane": 0.9, "ethane": 0.1}
+    z = 1.0 - (0.9 * 0.04452 + 0.1 * 0.0919) ** 2
+    assert gross_calorific_value(mixed) == pytest.approx(
+        (0.9 * 891.51e3 + 0.1 * 1562.14e3) / (molar_volume * z), rel=1e-14
+    )
 
 
 def test_intake_reads_the_example_as_it_was_meant(example_month):
     """The site file loads; lines set aside are exactly the garbled ones; good cells the rest."""
-    from meterfix.intake.logs.content import open_content
-    from meterfix.intake.logs.wide import parse_many
+    from meterfix.intake.logs import open_content, parse_many
     from meterfix.intake.site import site_from_text
 
     site = site_from_text(example_month.site_text, "site.toml")
@@ -123,6 +134,9 @@ def test_intake_reads_the_example_as_it_was_meant(example_month):
         bad = sum(len(log.flaws.bad_cells) for log in own)
         if source.name == "compressed_air":
             garbled = len(example_month.air_file_flaws.garbled)
+        if source.name == "historian":  # a row holds one cell; those of a strange tag go with it
+            garbled += bad + len(example_month.stray_lines)
+            bad += len(example_month.stray_lines)
         assert sum(result.lines_set_aside for result in parsed) == garbled
         assert sum(result.cells_set_aside for result in parsed) == bad
 
@@ -180,7 +194,7 @@ def test_build_makes_the_stored_example(tmp_path, capsys):
     (tmp_path / "notes").mkdir()
     (tmp_path / "notes" / "mine.csv").write_bytes(b"kept")
     size = build(tmp_path, tmp_path / "site.toml")
-    assert 1_000_000 < size < 5_000_000
+    assert 1_000_000 < size < 3_500_000
     assert (tmp_path / "notes" / "mine.csv").read_bytes() == b"kept"
     (tmp_path / "notes" / "mine.csv").unlink()
     rebuilt, stored = (
@@ -201,7 +215,14 @@ def test_a_written_span_has_site_and_logs(tmp_path):
     site = simulate(days=1, noise=False, calibration=False, digits=9).write(tmp_path / "span")
     assert site.name == "site.toml"
     folders = sorted(path.name for path in (tmp_path / "span" / "logs").iterdir())
-    assert folders == ["compressed_air", "kiln_control", "supply", "weather", "works"]
+    assert folders == [
+        "compressed_air",
+        "historian",
+        "kiln_control",
+        "supply",
+        "weather",
+        "works",
+    ]
     text = gzip.decompress(
         (tmp_path / "span/logs/supply/FT-101_2026-10-01.csv.gz").read_bytes()
     ).decode()
