@@ -1,6 +1,6 @@
 """What really flows and at what state: weather, shifts, kilns, compressors, supply pressure.
 
-All of it is drawn for the whole month from the seed, so that a few days of the month are the
+All of it is drawn for the whole month from one random seed, so that a few days of the month are the
 same days whether simulated alone or with the rest. Every stream of random numbers belongs to a
 name; adding one changes no other.
 """

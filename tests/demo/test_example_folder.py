@@ -185,7 +185,7 @@ def test_lay_never_touches_somebody_elses_folder(tmp_path):
 
 
 def test_build_makes_the_stored_example(tmp_path, capsys):
-    """The documented command makes the stored logs and the packaged site file from the seed.
+    """The documented command makes the stored logs and the packaged site file from its random seed.
 
     Logs that the month does not have go; files elsewhere stay.
     """
