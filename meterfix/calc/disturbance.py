@@ -15,6 +15,7 @@ import numpy as np
 from meterfix.calc.primary.devices import Devices
 from meterfix.calc.primary.flow import Flow
 from meterfix.calc.primary.forms import discharge_uncertainty, expansibility_uncertainty
+from meterfix.calc.primary.stated_uncertainty import SHORT_STRAIGHT_LENGTHS
 from meterfix.frames import Floats, Integers, Truths
 
 _COVERAGE_FACTOR = 2.0
@@ -73,9 +74,10 @@ def discharge_standard_uncertainty(devices: Devices, reynolds_number: Floats) ->
     Returns
     -------
     (n,) array
-        The certificate's for a calibrated device, NaN outside its range of Re_D if it states
-        one; else the standard's, NaN outside the limits of use, judged at the reference
-        temperatures as everywhere. [-]
+        The certificate's for a calibrated device, with what short straight lengths add; NaN
+        outside the certificate's range of Re_D, or the standard's limits where it states none.
+        Else the standard's, NaN outside the limits of use, judged at the reference temperatures
+        as everywhere. [-]
     """
     by_standard = discharge_uncertainty(
         reynolds_number,
@@ -84,11 +86,12 @@ def discharge_standard_uncertainty(devices: Devices, reynolds_number: Floats) ->
         form=devices.form,
         short_straight_lengths=devices.short_straight_lengths > 0.0,
     )
+    # a calibration was made in good flow: what disturbs it on site comes on top of it
+    added = np.where(devices.short_straight_lengths > 0.0, SHORT_STRAIGHT_LENGTHS, 0.0)
     by_certificate = np.where(
-        (reynolds_number < devices.lowest_reynolds_number)
-        | (reynolds_number > devices.highest_reynolds_number),
+        devices.reynolds_number_outside_limits(reynolds_number),
         np.nan,
-        devices.calibration_uncertainty,
+        devices.calibration_uncertainty + added / _COVERAGE_FACTOR,
     )
     return np.where(np.isnan(devices.calibrated), by_standard / _COVERAGE_FACTOR, by_certificate)
 

@@ -203,7 +203,7 @@ volume_base = {{ pressure = "101.325 kPa", temperature = "15 degC" }}
 
 {_composition(BEFORE, "")}
 
-[gas.natural_gas.composition.uncertainty] # the chromatograph's repeatability, of both compositions
+[gas.natural_gas.composition.uncertainty] # by component, in both alike
 k = 2
 {analysed}
 

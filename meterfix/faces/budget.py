@@ -11,7 +11,7 @@ from meterfix.faces.asked import Asked, Row
 from meterfix.faces.shown import base_terms, energy_terms, period, standing, status
 from meterfix.run.opening import OpenSite
 
-RANDOM = "what does not repeat"
+RANDOM = "scatter of readings, and what happens between them"
 
 
 def budget(opened: OpenSite, asked: Asked) -> list[Row]:

@@ -199,7 +199,7 @@ HEADINGS = {
     "mass_kg": "mass\nkg",
     "energy_MJ": "energy\nMJ",
     "measured_fraction": "measured",
-    "expanded_uncertainty_percent": "\u00b1 %\nk=2",
+    "expanded_uncertainty_percent": "volume\n\u00b1 %",
     "expanded_uncertainty": "\u00b1\nk=2",
     "significant": "signif-\nicant",
     "source_of_uncertainty": "source of uncertainty",

@@ -290,7 +290,7 @@ def test_a_budget_is_the_stored_contributions(works, by):
         doubt, total = doubts[key]
         assert len({line["source_of_uncertainty"] for line in some}) == len(some)
         found = {line["source_of_uncertainty"]: line for line in some}
-        random = found.pop("what does not repeat")
+        random = found.pop("scatter of readings, and what happens between them")
         assert random["mass_contribution_kg"] == sqrt(doubt["random_variance"][0])
         assert found.keys() == doubt["contributions"].keys()
         for name, (mass, volume, energy) in doubt["contributions"].items():

@@ -46,7 +46,7 @@ def test_the_job_comes_first():
     """Under the title stands one paragraph that says what meterfix does, then the first command."""
     title, job, *_ = README.split("\n\n")
     assert title == "# meterfix"
-    assert job.startswith("meterfix turns the raw logs of orifice meters")
+    assert job.startswith("meterfix turns the raw logs of orifice plates, nozzles")
     assert README.index(job) < README.index(DEMO) < README.index(TEST)
 
 

@@ -142,7 +142,8 @@ def signal_parts(
         The transmitter's upper range limit, SI.
     acts_on
         'zero': the same error at every reading. 'span': in proportion to the distance from the
-        lower range value; a size that is not of reading is the error at the upper range value.
+        lower range value, and the size is the error at the upper range value; a size of reading
+        is in proportion to the reading itself.
     effect
         What was stated.
     covered
