@@ -53,7 +53,7 @@ def test_stated_uncertainties_are_those_of_a_monte_carlo():
         for (number, level), task in zip(settings, tasks, strict=True):
             found = task.result()
             shown(number, level, found)
-            if level is not VERY_LOW and not agrees(found).all():
+            if level != VERY_LOW and not agrees(found).all():
                 wrong.append((number, level.words, found.ratio))
     assert not wrong
 
@@ -76,7 +76,7 @@ def shown(number, level, found):
                     f" [{drawn * (1.0 - half):.4f}, {drawn * (1.0 + half):.4f}]"
                 )
             print(line)
-    if level is VERY_LOW:
+    if level == VERY_LOW:
         print(f"\n{level.words}, {value}: 95 % of the drawn totals, and the stated one, k = 2 [%]")
         for n, row in enumerate(ROWS):
             for m, period in enumerate(PERIODS):

@@ -238,7 +238,7 @@ def _draw(number, level, states, sources, generator) -> np.ndarray:
             size = np.array([_size(part, instant) for instant in middle])
             amount = (size[:, np.newaxis] * z[source.name]).ravel()
             key = part.parameter, part.subject
-            if level is VERY_LOW and part.parameter == "discharge_coefficient":
+            if level == VERY_LOW and part.parameter == "discharge_coefficient":
                 # a dp near nothing leaves the limits of use, where no multiple is stated
                 throat = design(number).throats[part.subject]
                 ratio = np.array([throat.bore / throat.pipe])
@@ -253,7 +253,7 @@ def _draw(number, level, states, sources, generator) -> np.ndarray:
     records = hourly_records(days, _LIBRARY, disturbances=disturbances)
     columns = [HOURLY_INDEX[name] for name in SENSITIVE]
     rates = np.stack([record.statistics[:, columns] for record in records], axis=1) / 3600.0
-    assert level is VERY_LOW or np.isfinite(rates).all()
+    assert level == VERY_LOW or np.isfinite(rates).all()
     # a dp that is drawn below minus the cut-off counts as no flow
     rates = np.nan_to_num(rates).reshape(len(middle), ALIKE, len(METERS), 3)
     amounts = rates * (states[SUPPLY].interval / SECOND)[:, np.newaxis, np.newaxis, np.newaxis]
