@@ -99,12 +99,12 @@ class KnownGas:
     """rho = p / (500 T) and mu_JT = 4.5e-6 K/Pa falling 1 % per K; no gas below 200 K."""
 
     def __init__(self, library: KnownLibrary, terms: GasTerms) -> None:
-        self.library = library
+        self.gases = library
         self.terms = terms
         self.simplified = terms.line_model.model is StateModel.FIXED
 
     def line_state(self, static_pressure: np.ndarray, temperature: np.ndarray) -> State:
-        self.library.calls.append(len(static_pressure))
+        self.gases.calls.append(len(static_pressure))
         no_gas = ~(temperature >= 200.0)
         ones = np.where(no_gas, np.nan, 1.0)
         return State(
